@@ -1,0 +1,1 @@
+//! Maps: how content moves from one raster's pixels to another's.

@@ -1,0 +1,221 @@
+//! Rasters: samples on a grid, in memory or in a file, read and written by windows.
+//!
+//! [`Source`] and [`Sink`] are all that the rest of the crate knows of files.
+
+use crate::error::Result;
+use crate::grid::Grid;
+use serde::{Deserialize, Serialize};
+use std::ops::Range;
+use std::path::Path;
+
+/// The type of a stored sample.
+#[derive(Clone, Copy, Debug, PartialEq, Eq, Hash, Serialize, Deserialize)]
+#[serde(rename_all = "lowercase")]
+#[allow(missing_docs)]
+pub enum SampleType {
+    U8,
+    I8,
+    U16,
+    I16,
+    U32,
+    I32,
+    F32,
+    F64,
+}
+
+/// Samples in their stored type, band by band: `data[(band * rows + row) * columns + column]`.
+#[derive(Clone, Debug, PartialEq)]
+#[allow(missing_docs)]
+pub enum Samples {
+    U8(Vec<u8>),
+    I8(Vec<i8>),
+    U16(Vec<u16>),
+    I16(Vec<i16>),
+    U32(Vec<u32>),
+    I32(Vec<i32>),
+    F32(Vec<f32>),
+    F64(Vec<f64>),
+}
+
+/// A window of a raster: half-open ranges of rows and columns.
+#[derive(Clone, Debug, PartialEq, Eq)]
+pub struct Window {
+    /// Rows, counted from 0.
+    pub rows: Range<usize>,
+    /// Columns, counted from 0.
+    pub columns: Range<usize>,
+}
+
+/// What a raster is, without its samples.
+#[derive(Clone, Debug)]
+pub struct Header {
+    /// Size and place.
+    pub grid: Grid,
+    /// Bands in all: pages x samples per pixel. Every one is read and written.
+    pub bands: usize,
+    /// Type of the stored samples.
+    pub sample_type: SampleType,
+    /// The code the file declares for "no data" (beside NaN, which always means missing).
+    pub missing: Option<f64>,
+    /// Channel names, where the file has them (empty, or one a band).
+    pub band_names: Vec<String>,
+    /// How the file stores the samples and what else it carries; copied to the output and corrected for its grid.
+    pub storage: Storage,
+}
+
+/// How a file stores its samples, and the metadata that travels with them.
+#[derive(Clone, Debug, Default)]
+pub struct Storage {}
+
+/// A raster that is read by windows. Reading is thread-safe and changes nothing.
+pub trait Source: Send + Sync {
+    /// What the raster is.
+    fn header(&self) -> &Header;
+    /// Reads a window of the bands in `bands`. The answer holds `bands.len() * rows * columns` samples, band by band.
+    ///
+    /// # Errors
+    /// When the file cannot be read or is damaged. A window outside the raster is a usage error.
+    fn read(&self, bands: Range<usize>, window: &Window) -> Result<Samples>;
+}
+
+/// A raster that is written by windows.
+pub trait Sink: Send {
+    /// Windows must start at multiples of this in rows and columns, and end at multiples or at the raster's end.
+    fn alignment(&self) -> usize;
+    /// Writes a window of all bands, band by band as in [`Source::read`]. Each window is written once.
+    ///
+    /// # Errors
+    /// When the disk refuses.
+    fn write(&mut self, window: &Window, samples: &Samples) -> Result<()>;
+    /// Completes the file, syncs it and gives it its name. Dropped without this, nothing is left behind.
+    ///
+    /// # Errors
+    /// When the disk refuses.
+    fn finish(self: Box<Self>) -> Result<()>;
+}
+
+impl SampleType {
+    /// Bytes of one sample.
+    pub fn bytes(self) -> usize {
+        match self {
+            SampleType::U8 | SampleType::I8 => 1,
+            SampleType::U16 | SampleType::I16 => 2,
+            SampleType::U32 | SampleType::I32 | SampleType::F32 => 4,
+            SampleType::F64 => 8,
+        }
+    }
+
+    /// Smallest and largest value of an integer type; `None` for floating point.
+    pub fn integer_range(self) -> Option<(f64, f64)> {
+        match self {
+            SampleType::U8 => Some((0.0, 255.0)),
+            SampleType::I8 => Some((-128.0, 127.0)),
+            SampleType::U16 => Some((0.0, 65_535.0)),
+            SampleType::I16 => Some((-32_768.0, 32_767.0)),
+            SampleType::U32 => Some((0.0, f64::from(u32::MAX))),
+            SampleType::I32 => Some((f64::from(i32::MIN), f64::from(i32::MAX))),
+            SampleType::F32 | SampleType::F64 => None,
+        }
+    }
+
+    /// The name used in options and ledgers: `u8` to `f64`.
+    pub fn name(self) -> &'static str {
+        match self {
+            SampleType::U8 => "u8",
+            SampleType::I8 => "i8",
+            SampleType::U16 => "u16",
+            SampleType::I16 => "i16",
+            SampleType::U32 => "u32",
+            SampleType::I32 => "i32",
+            SampleType::F32 => "f32",
+            SampleType::F64 => "f64",
+        }
+    }
+}
+
+/// Runs `$body` with `$v` bound to the vector inside a [`Samples`], whatever its type.
+#[macro_export]
+macro_rules! with_samples {
+    ($samples:expr, $v:ident => $body:expr) => {
+        match $samples {
+            $crate::raster::Samples::U8($v) => $body,
+            $crate::raster::Samples::I8($v) => $body,
+            $crate::raster::Samples::U16($v) => $body,
+            $crate::raster::Samples::I16($v) => $body,
+            $crate::raster::Samples::U32($v) => $body,
+            $crate::raster::Samples::I32($v) => $body,
+            $crate::raster::Samples::F32($v) => $body,
+            $crate::raster::Samples::F64($v) => $body,
+        }
+    };
+}
+
+impl Samples {
+    /// `len` zeros of the given type.
+    pub fn zeros(sample_type: SampleType, len: usize) -> Self {
+        match sample_type {
+            SampleType::U8 => Samples::U8(vec![0; len]),
+            SampleType::I8 => Samples::I8(vec![0; len]),
+            SampleType::U16 => Samples::U16(vec![0; len]),
+            SampleType::I16 => Samples::I16(vec![0; len]),
+            SampleType::U32 => Samples::U32(vec![0; len]),
+            SampleType::I32 => Samples::I32(vec![0; len]),
+            SampleType::F32 => Samples::F32(vec![0.0; len]),
+            SampleType::F64 => Samples::F64(vec![0.0; len]),
+        }
+    }
+
+    /// Number of samples.
+    pub fn len(&self) -> usize {
+        with_samples!(self, v => v.len())
+    }
+
+    /// Whether there are none.
+    pub fn is_empty(&self) -> bool {
+        self.len() == 0
+    }
+
+    /// The type of the samples.
+    pub fn sample_type(&self) -> SampleType {
+        match self {
+            Samples::U8(_) => SampleType::U8,
+            Samples::I8(_) => SampleType::I8,
+            Samples::U16(_) => SampleType::U16,
+            Samples::I16(_) => SampleType::I16,
+            Samples::U32(_) => SampleType::U32,
+            Samples::I32(_) => SampleType::I32,
+            Samples::F32(_) => SampleType::F32,
+            Samples::F64(_) => SampleType::F64,
+        }
+    }
+}
+
+impl Window {
+    /// The whole of a grid.
+    pub fn whole(grid: &Grid) -> Self {
+        Window { rows: 0..grid.rows, columns: 0..grid.columns }
+    }
+
+    /// Rows x columns.
+    pub fn area(&self) -> usize {
+        self.rows.len() * self.columns.len()
+    }
+}
+
+/// Opens a raster file for reading; the format is told by the file's first bytes, not by its name.
+///
+/// # Errors
+/// When there is no such file, or it is damaged, or of a kind that is not read.
+pub fn open(path: &Path) -> Result<Box<dyn Source>> {
+    Err(crate::error::Error::unsupported(path, "no format is built in", ""))
+}
+
+/// Creates a raster file; the format is told by the name's ending. Nothing appears under `path` before
+/// [`Sink::finish`].
+///
+/// # Errors
+/// When the folder is missing, `path` exists and `overwrite` is false, or the format cannot hold such a raster.
+pub fn create(path: &Path, header: &Header, overwrite: bool) -> Result<Box<dyn Sink>> {
+    let _ = (header, overwrite);
+    Err(crate::error::Error::unsupported(path, "no format is built in", ""))
+}
