@@ -2,7 +2,13 @@
 
 pub mod error;
 pub mod grid;
+pub mod job;
+pub mod kernel;
 pub mod map;
 pub mod raster;
+mod real;
+pub mod report;
+pub mod resample;
 
 pub use error::{Error, Result};
+pub use real::Real;

@@ -1,0 +1,4 @@
+//! Reports: the ledger, and pictures.
+
+mod ledger;
+pub use ledger::Ledger;
