@@ -9,6 +9,8 @@ pub mod raster;
 mod real;
 pub mod report;
 pub mod resample;
+pub mod simd;
+pub mod slow;
 
 pub use error::{Error, Result};
 pub use real::Real;

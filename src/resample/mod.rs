@@ -1,4 +1,22 @@
 //! Resampling: a plan picked from grids, map and kernel, and the passes that carry it out.
 
+pub mod axis;
+pub mod blocks;
+mod chain;
+mod convert;
+mod copy;
+mod fourier;
+mod gather;
+mod least_squares;
+mod overlap;
+mod patch;
+mod plan;
+mod rows_and_columns;
 mod rules;
+pub mod weights;
+
+pub use blocks::{Block, Engine};
+pub use convert::Counts;
+pub use patch::MissingCodes;
+pub use plan::{Plan, Size};
 pub use rules::{Outside, Reduce, Rules};

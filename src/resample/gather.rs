@@ -1,0 +1,183 @@
+//! The pass for turned and projective maps: the tensor product of both axes' weights at every position.
+
+use super::axis::is_inside;
+use super::rules::Outside;
+use super::weights::Weigher;
+use crate::map::Map;
+use crate::real::Real;
+use crate::simd;
+use ndarray::Array2;
+use ndarray::parallel::prelude::*;
+use std::ops::Range;
+
+/// How a gather looks at each position.
+#[derive(Clone, Debug)]
+pub struct Look {
+    /// From output to input positions.
+    pub back: Map,
+    /// From input positions to the nodes of the plane (the identity, but for a least-squares lattice).
+    pub lattice: Map,
+    /// Rows and columns of the input.
+    pub source: (usize, usize),
+    /// What lies outside.
+    pub outside: Outside,
+    /// Weights along rows (which rows) and along columns.
+    pub weighers: (Weigher, Weigher),
+    /// Where the stretch follows the local Jacobian pixel by pixel (projective maps that shrink): its largest values, which
+    /// the plane was read for.
+    pub local: Option<(f64, f64)>,
+}
+
+/// A plane of samples or coefficients over extended indices.
+pub struct Plane<'a, T> {
+    /// Rows x columns.
+    pub values: &'a Array2<T>,
+    /// Extended index of the first row and column.
+    pub origin: (i64, i64),
+}
+
+/// How the gather weighs: by the weights themselves or by their moduli.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum By {
+    /// The weights.
+    Weights,
+    /// Their moduli, over their sum.
+    Moduli,
+}
+
+/// The factors by which pixels grow along the input's axes: norms of the rows of the Jacobian, at least 1.
+pub fn stretch_at(back: &Map, row: f64, column: f64) -> (f64, f64) {
+    let j = back.jacobian(row, column);
+    let norm = |v: [f64; 2]| {
+        let n = v[0].hypot(v[1]);
+        // A turn's rounding is no reduction.
+        if n < 1.0 + 1e-9 || !n.is_finite() { 1.0 } else { n }
+    };
+    (norm(j[0]), norm(j[1]))
+}
+
+/// Evaluates the block of outputs `rows` x `columns`; NaN where there is nothing: outside, or out of an open raster's
+/// reach.
+pub fn gather<T: Real>(
+    look: &Look,
+    plane: &Plane<T>,
+    by: By,
+    rows: &Range<usize>,
+    columns: &Range<usize>,
+) -> Array2<T> {
+    let mut out = Array2::<T>::from_elem((rows.len(), columns.len()), T::from_f64(f64::NAN));
+    out.axis_chunks_iter_mut(ndarray::Axis(0), 4).into_par_iter().enumerate().for_each_init(
+        || Local::new(look),
+        |local, (group, mut lines)| {
+            for (j, mut line) in lines.rows_mut().into_iter().enumerate() {
+                let r = (rows.start + 4 * group + j) as f64;
+                for (v, c) in line.iter_mut().zip(columns.clone()) {
+                    local.pixel(look, plane, by, r, c as f64, v);
+                }
+            }
+        },
+    );
+    out
+}
+
+/// What one thread needs.
+struct Local<T> {
+    weighers: (Weigher, Weigher),
+    exact: (Vec<f64>, Vec<f64>),
+    cast: (Vec<T>, Vec<T>),
+    sums: Vec<T>,
+}
+
+impl<T: Real> Local<T> {
+    fn new(look: &Look) -> Self {
+        Local {
+            weighers: look.weighers.clone(),
+            exact: Default::default(),
+            cast: Default::default(),
+            sums: Vec::new(),
+        }
+    }
+
+    fn pixel(&mut self, look: &Look, plane: &Plane<T>, by: By, row: f64, column: f64, out: &mut T) {
+        let (x, y) = look.back.apply(row, column);
+        if !(x.abs() < 1e15 && y.abs() < 1e15) {
+            return;
+        }
+        if look.outside == Outside::Missing && !(is_inside(x, look.source.0) && is_inside(y, look.source.1)) {
+            return;
+        }
+        if let Some(most) = look.local {
+            let (a, b) = stretch_at(&look.back, row, column);
+            self.weighers.0.set_stretch(a.min(most.0));
+            self.weighers.1.set_stretch(b.min(most.1));
+        }
+        let (x, y) = if look.lattice == Map::IDENTITY { (x, y) } else { look.lattice.apply(x, y) };
+        let top = self.weighers.0.weights(x, &mut self.exact.0) - plane.origin.0;
+        let left = self.weighers.1.weights(y, &mut self.exact.1) - plane.origin.1;
+        if self.exact.0.is_empty() || self.exact.1.is_empty() {
+            return;
+        }
+        if by == By::Moduli {
+            moduli(&mut self.exact.0);
+            moduli(&mut self.exact.1);
+        }
+        cast(&self.exact.0, &mut self.cast.0);
+        cast(&self.exact.1, &mut self.cast.1);
+        let (Ok(top), Ok(left)) = (usize::try_from(top), usize::try_from(left)) else { return };
+        let width = plane.values.ncols();
+        let Some(values) = plane.values.as_slice() else { return };
+        let (wr, wc) = (&self.cast.0, &self.cast.1);
+        *out = if wr.len() == 4 && wc.len() == 4 {
+            product_4x4(wr, wc, &values[top * width + left..], width)
+        } else {
+            self.sums.resize(wc.len(), T::default());
+            let sums = &mut self.sums;
+            simd::wide(|| product(wr, wc, &values[top * width + left..], width, sums))
+        };
+    }
+}
+
+/// Down the columns first (vectorised across columns), then along the row of sums, each in order of the taps.
+#[inline(always)]
+fn product<T: Real>(wr: &[T], wc: &[T], values: &[T], width: usize, sums: &mut [T]) -> T {
+    for (i, w) in wr.iter().enumerate() {
+        let line = &values[i * width..][..wc.len()];
+        if i == 0 {
+            sums.iter_mut().zip(line).for_each(|(s, v)| *s = *w * *v);
+        } else {
+            sums.iter_mut().zip(line).for_each(|(s, v)| *s = *s + *w * *v);
+        }
+    }
+    let mut total = wc[0] * sums[0];
+    for k in 1..wc.len() {
+        total = total + wc[k] * sums[k];
+    }
+    total
+}
+
+/// [`product`] for the commonest size, the same operations in the same order.
+#[inline(always)]
+fn product_4x4<T: Real>(wr: &[T], wc: &[T], values: &[T], width: usize) -> T {
+    let mut sums = [T::default(); 4];
+    for i in 0..4 {
+        let line = &values[i * width..i * width + 4];
+        for j in 0..4 {
+            sums[j] = if i == 0 { wr[0] * line[j] } else { sums[j] + wr[i] * line[j] };
+        }
+    }
+    let mut total = wc[0] * sums[0];
+    for k in 1..4 {
+        total = total + wc[k] * sums[k];
+    }
+    total
+}
+
+fn moduli(w: &mut [f64]) {
+    let sum: f64 = w.iter().map(|v| v.abs()).sum();
+    w.iter_mut().for_each(|v| *v = v.abs() / sum);
+}
+
+fn cast<T: Real>(from: &[f64], to: &mut Vec<T>) {
+    to.clear();
+    to.extend(from.iter().map(|v| T::from_f64(*v)));
+}

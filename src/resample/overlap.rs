@@ -1,0 +1,133 @@
+//! Exact overlap under a turned map: each output pixel's mean over its image in the input, by polygon clipping.
+//!
+//! Sutherland and Hodgman 1974, CACM 17(1):32-42, against the rows and then the columns of the input's cells; areas by
+//! the shoelace sum relative to the first corner.
+
+use super::gather::Plane;
+use crate::map::Map;
+use crate::real::Real;
+use ndarray::Array2;
+use ndarray::parallel::prelude::*;
+use std::ops::Range;
+
+/// Which cells count: of a raster of this size, those inside; `None`: all that the plane holds.
+pub type Limits = Option<(usize, usize)>;
+
+/// The mean over each output pixel's image; NaN where `keep` says that there is nothing, or the image covers no cell.
+pub fn overlap<T: Real>(
+    back: &Map,
+    plane: &Plane<T>,
+    limits: Limits,
+    rows: &Range<usize>,
+    columns: &Range<usize>,
+    keep: impl Fn(f64, f64) -> bool + Sync,
+) -> Array2<T> {
+    let mut out = Array2::<T>::from_elem((rows.len(), columns.len()), T::from_f64(f64::NAN));
+    out.axis_chunks_iter_mut(ndarray::Axis(0), 4).into_par_iter().enumerate().for_each_init(
+        || (Vec::new(), Clip::default()),
+        |(cells, clip), (group, mut lines)| {
+            for (j, mut line) in lines.rows_mut().into_iter().enumerate() {
+                let r = (rows.start + 4 * group + j) as f64;
+                for (v, c) in line.iter_mut().zip(columns.clone()) {
+                    let c = c as f64;
+                    if !keep(r, c) {
+                        continue;
+                    }
+                    clip.cells(&corners(back, r, c), limits, cells);
+                    let (mut sum, mut area) = (0.0, 0.0);
+                    for &(row, column, a) in cells.iter() {
+                        let at = (row - plane.origin.0, column - plane.origin.1);
+                        if let Some(sample) = plane.values.get((at.0 as usize, at.1 as usize)) {
+                            sum += a * sample.to_f64();
+                            area += a;
+                        }
+                    }
+                    if area > 0.0 {
+                        *v = T::from_f64(sum / area);
+                    }
+                }
+            }
+        },
+    );
+    out
+}
+
+/// The image of an output pixel in the input: its four corners in order.
+pub fn corners(back: &Map, row: f64, column: f64) -> [(f64, f64); 4] {
+    [(-0.5, -0.5), (-0.5, 0.5), (0.5, 0.5), (0.5, -0.5)].map(|(r, c)| back.apply(row + r, column + c))
+}
+
+/// Clips polygons against cells; keeps its buffers.
+#[derive(Default)]
+pub struct Clip {
+    row_part: Vec<(f64, f64)>,
+    cell_part: Vec<(f64, f64)>,
+    spare: Vec<(f64, f64)>,
+}
+
+impl Clip {
+    /// The cells (row, column, area) that a convex polygon covers.
+    pub fn cells(&mut self, polygon: &[(f64, f64)], limits: Limits, out: &mut Vec<(i64, i64, f64)>) {
+        out.clear();
+        let span = |part: &[(f64, f64)], axis: fn(&(f64, f64)) -> f64, limit: Option<usize>| {
+            let low = part.iter().map(axis).fold(f64::INFINITY, f64::min);
+            let high = part.iter().map(axis).fold(f64::NEG_INFINITY, f64::max);
+            let (low, high) = ((low + 0.5).floor(), (high + 0.5).floor());
+            let (low, high) = (low.max(-9e15) as i64, high.min(9e15) as i64);
+            match limit {
+                Some(n) => low.max(0)..=high.min(n as i64 - 1),
+                None => low..=high,
+            }
+        };
+        for row in span(polygon, |p| p.0, limits.map(|l| l.0)) {
+            let edge = row as f64 - 0.5;
+            clip_band(polygon, |p| p.0, edge, &mut self.spare, &mut self.row_part);
+            if self.row_part.len() < 3 {
+                continue;
+            }
+            for column in span(&self.row_part, |p| p.1, limits.map(|l| l.1)) {
+                let edge = column as f64 - 0.5;
+                clip_band(&self.row_part, |p| p.1, edge, &mut self.spare, &mut self.cell_part);
+                let area = shoelace(&self.cell_part);
+                if area > 0.0 {
+                    out.push((row, column, area));
+                }
+            }
+        }
+    }
+}
+
+/// Keeps the part of a polygon between `edge` and `edge + 1` along one coordinate.
+fn clip_band(
+    polygon: &[(f64, f64)],
+    axis: fn(&(f64, f64)) -> f64,
+    edge: f64,
+    spare: &mut Vec<(f64, f64)>,
+    out: &mut Vec<(f64, f64)>,
+) {
+    clip_half(polygon, |p| axis(p) - edge, spare);
+    clip_half(spare, |p| edge + 1.0 - axis(p), out);
+}
+
+/// Keeps the part of a polygon where `height` is not negative.
+fn clip_half(polygon: &[(f64, f64)], height: impl Fn(&(f64, f64)) -> f64, out: &mut Vec<(f64, f64)>) {
+    out.clear();
+    for (i, p) in polygon.iter().enumerate() {
+        let q = &polygon[(i + 1) % polygon.len()];
+        let (a, b) = (height(p), height(q));
+        if a >= 0.0 {
+            out.push(*p);
+        }
+        if (a > 0.0 && b < 0.0) || (a < 0.0 && b > 0.0) {
+            let t = a / (a - b);
+            out.push((p.0 + t * (q.0 - p.0), p.1 + t * (q.1 - p.1)));
+        }
+    }
+}
+
+fn shoelace(polygon: &[(f64, f64)]) -> f64 {
+    let Some(&(r0, c0)) = polygon.first() else { return 0.0 };
+    let twice: f64 =
+        polygon.windows(2).map(|w| (w[0].0 - r0) * (w[1].1 - c0) - (w[1].0 - r0) * (w[0].1 - c0)).sum();
+    0.5 * twice.abs()
+}

@@ -1,0 +1,102 @@
+//! The pass for maps that keep rows and columns apart: along rows first, then along columns.
+
+use super::chain::{Chain, LANES, Part, Scratch, Stretch};
+use super::patch::Patch;
+use crate::real::Real;
+use ndarray::parallel::prelude::*;
+use ndarray::{Array2, Axis as NdAxis};
+
+/// Columns that the second pass takes at a time: a strip of some thousand rows stays in the cache of one core.
+const STRIP: usize = 4 * LANES;
+
+/// What of the patch is resampled.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Plane {
+    /// The samples, missing ones as 0.
+    Values,
+    /// 1 where a sample is there, 0 where not.
+    Mask,
+}
+
+/// Resamples one band of a patch. `rows` and `columns` come with the stretches they are wanted for, whose sample ranges are
+/// the patch's. The result has the rows and columns wanted.
+pub fn resample<T: Real>(
+    patch: &Patch,
+    band: usize,
+    plane: Plane,
+    part: Part,
+    rows: (&Chain<T>, &Stretch<T>),
+    columns: (&Chain<T>, &Stretch<T>),
+) -> Array2<T> {
+    let (height, width) = patch.size();
+    let (out_height, out_width) = (rows.1.wanted.clone().count(), columns.1.wanted.clone().count());
+    let mut between = Array2::<T>::default((height, out_width));
+    between.axis_chunks_iter_mut(NdAxis(0), LANES).into_par_iter().enumerate().for_each_init(
+        || (RowScratch::<T>::new(width, out_width), Scratch::default()),
+        |(row, scratch), (group, mut out)| {
+            for j in 0..out.nrows() {
+                row.load(patch, band, group * LANES + j, j, plane);
+            }
+            columns.0.apply(part, columns.1, &row.lanes, LANES, &mut row.out, scratch);
+            for (j, mut line) in out.rows_mut().into_iter().enumerate() {
+                line.iter_mut().zip(row.out.chunks_exact(LANES)).for_each(|(v, lanes)| *v = lanes[j]);
+            }
+        },
+    );
+    let mut result = Array2::<T>::default((out_height, out_width));
+    result.axis_chunks_iter_mut(NdAxis(1), STRIP).into_par_iter().enumerate().for_each_init(
+        || (Vec::new(), Vec::new(), Scratch::default()),
+        |(strip, out_strip, scratch), (index, mut out)| {
+            let (start, used) = (index * STRIP, out.ncols());
+            let lanes = used.next_multiple_of(LANES);
+            strip.clear();
+            strip.resize(height * lanes, T::default());
+            for (r, row) in strip.chunks_exact_mut(lanes).enumerate() {
+                if let Some(line) = between.row(r).as_slice() {
+                    row[..used].copy_from_slice(&line[start..start + used]);
+                }
+            }
+            out_strip.clear();
+            out_strip.resize(out_height * lanes, T::default());
+            rows.0.apply(part, rows.1, strip, lanes, out_strip, scratch);
+            for (mut line, row) in out.rows_mut().into_iter().zip(out_strip.chunks_exact(lanes)) {
+                line.iter_mut().zip(row).for_each(|(v, w)| *v = *w);
+            }
+        },
+    );
+    result
+}
+
+/// Sixteen rows side by side.
+struct RowScratch<T> {
+    line: Vec<T>,
+    mask: Vec<T>,
+    lanes: Vec<T>,
+    out: Vec<T>,
+}
+
+impl<T: Real> RowScratch<T> {
+    fn new(width: usize, out_width: usize) -> Self {
+        RowScratch {
+            line: vec![T::default(); width],
+            mask: vec![T::default(); width],
+            lanes: vec![T::default(); width * LANES],
+            out: vec![T::default(); out_width * LANES],
+        }
+    }
+
+    /// Puts row `row` of the patch into lane `lane`.
+    fn load(&mut self, patch: &Patch, band: usize, row: usize, lane: usize, plane: Plane) {
+        let from = match plane {
+            Plane::Values => {
+                patch.row(band, row, &mut self.line, None);
+                &self.line
+            }
+            Plane::Mask => {
+                patch.row(band, row, &mut self.line, Some(&mut self.mask));
+                &self.mask
+            }
+        };
+        self.lanes.chunks_exact_mut(LANES).zip(from).for_each(|(lanes, v)| lanes[lane] = *v);
+    }
+}
