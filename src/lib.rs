@@ -1,10 +1,13 @@
 //! Regauge puts rasters of measurements on a common grid and says what that cost.
 
+#[cfg(feature = "cli")]
+pub mod cli;
 pub mod error;
 pub mod grid;
 pub mod job;
 pub mod kernel;
 pub mod map;
+pub mod measure;
 pub mod raster;
 mod real;
 pub mod report;

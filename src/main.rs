@@ -1,1 +1,5 @@
-fn main() {}
+//! The `regauge` command.
+
+fn main() -> std::process::ExitCode {
+    regauge::cli::main()
+}

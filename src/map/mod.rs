@@ -5,9 +5,11 @@
 //! moving -> reference, with both grids named ([`MapFile`]).
 
 mod file;
+mod frame;
 mod motion;
 
 pub use file::MapFile;
+pub use frame::{Anchor, Frame, Rescale, moved, rescaled};
 pub use motion::Motion;
 
 use crate::error::{Error, Result};

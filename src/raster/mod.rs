@@ -2,7 +2,22 @@
 //!
 //! [`Source`] and [`Sink`] are all that the rest of the crate knows of files.
 
-use crate::error::Result;
+mod beside;
+mod digest;
+mod memory;
+mod npy;
+mod picture;
+mod samples;
+mod storage;
+mod tiff;
+
+pub use beside::check_free;
+pub use digest::{CELL, Digest, digest};
+pub use memory::{Collected, MemorySink, Raster};
+pub use storage::{Format, Storage};
+pub use tiff::{Compression, GeoKeys};
+
+use crate::error::{Error, Result};
 use crate::grid::Grid;
 use serde::{Deserialize, Serialize};
 use std::ops::Range;
@@ -62,10 +77,6 @@ pub struct Header {
     /// How the file stores the samples and what else it carries; copied to the output and corrected for its grid.
     pub storage: Storage,
 }
-
-/// How a file stores its samples, and the metadata that travels with them.
-#[derive(Clone, Debug, Default)]
-pub struct Storage {}
 
 /// A raster that is read by windows. Reading is thread-safe and changes nothing.
 pub trait Source: Send + Sync {
@@ -207,7 +218,56 @@ impl Window {
 /// # Errors
 /// When there is no such file, or it is damaged, or of a kind that is not read.
 pub fn open(path: &Path) -> Result<Box<dyn Source>> {
-    Err(crate::error::Error::unsupported(path, "no format is built in", ""))
+    use std::io::Read;
+    let mut file = std::fs::File::open(path).map_err(|e| Error::io(path, "opening", e))?;
+    if file.metadata().is_ok_and(|m| m.is_dir()) {
+        return Err(Error::unsupported(path, "this is a folder", "name a raster file"));
+    }
+    let mut head = Vec::new();
+    file.by_ref().take(8).read_to_end(&mut head).map_err(|e| Error::io(path, "reading", e))?;
+    Ok(match &head[..] {
+        [] => return Err(Error::malformed(path, "byte 0", "the file is empty")),
+        [b'I', b'I', 42 | 43, 0, ..] | [b'M', b'M', 0, 42 | 43, ..] => {
+            Box::new(tiff::TiffSource::open(path)?)
+        }
+        [0x93, b'N', b'U', b'M', b'P', b'Y', ..] => Box::new(npy::NpySource::open(path)?),
+        [0x89, b'P', b'N', b'G', ..] | [0xff, 0xd8, ..] | [b'P', b'1'..=b'7', ..] => {
+            Box::new(picture::open(path)?)
+        }
+        _ => {
+            return Err(Error::unsupported(
+                path,
+                "its first bytes are those of no format that is read",
+                "give a TIFF, BigTIFF, NPY, PNG, JPEG or PNM file",
+            ));
+        }
+    })
+}
+
+/// The format that a name's ending asks for.
+fn format_of(path: &Path) -> Result<Format> {
+    let ending = path.extension().map(|e| e.to_string_lossy().to_lowercase()).unwrap_or_default();
+    match ending.as_str() {
+        "tif" | "tiff" | "btf" | "gtiff" => Ok(Format::Tiff),
+        "npy" => Ok(Format::Npy),
+        "png" => Ok(Format::Picture),
+        _ => Err(Error::usage(
+            format!("{}: cannot write files that end in \"{ending}\"", path.display()),
+            "end the name in .tif, .npy or .png",
+        )),
+    }
+}
+
+/// Refuses, before any work, a header that the format of `path` cannot hold.
+///
+/// # Errors
+/// Says what does not fit, and which format holds it.
+pub fn check_writable(path: &Path, header: &Header) -> Result<()> {
+    match format_of(path)? {
+        Format::Picture => picture::check_writable(path, header),
+        Format::Npy | Format::Memory => Ok(()),
+        Format::Tiff => tiff::check_writable(path, header),
+    }
 }
 
 /// Creates a raster file; the format is told by the name's ending. Nothing appears under `path` before
@@ -216,6 +276,68 @@ pub fn open(path: &Path) -> Result<Box<dyn Source>> {
 /// # Errors
 /// When the folder is missing, `path` exists and `overwrite` is false, or the format cannot hold such a raster.
 pub fn create(path: &Path, header: &Header, overwrite: bool) -> Result<Box<dyn Sink>> {
-    let _ = (header, overwrite);
-    Err(crate::error::Error::unsupported(path, "no format is built in", ""))
+    Ok(match format_of(path)? {
+        Format::Picture => Box::new(picture::PngSink::create(path, header, overwrite)?),
+        Format::Npy => Box::new(npy::NpySink::create(path, header, overwrite)?),
+        Format::Tiff | Format::Memory => Box::new(tiff::TiffSink::create(path, header, overwrite)?),
+    })
+}
+
+/// Refuses windows and bands that are not in the raster.
+fn check_window(header: &Header, bands: &Range<usize>, window: &Window) -> Result<()> {
+    let inside = bands.end <= header.bands
+        && window.rows.end <= header.grid.rows
+        && window.columns.end <= header.grid.columns
+        && bands.start <= bands.end
+        && window.rows.start <= window.rows.end
+        && window.columns.start <= window.columns.end;
+    if inside {
+        return Ok(());
+    }
+    Err(Error::usage(
+        format!(
+            "bands {bands:?}, rows {:?}, columns {:?} are not all in a raster of {} x {} x {}",
+            window.rows, window.columns, header.bands, header.grid.rows, header.grid.columns
+        ),
+        "",
+    ))
+}
+
+/// Reading and writing at a place, without a shared position.
+trait Positioned {
+    fn read_exact_at_offset(&self, buf: &mut [u8], offset: u64) -> std::io::Result<()>;
+    fn write_all_at_offset(&self, buf: &[u8], offset: u64) -> std::io::Result<()>;
+}
+
+#[cfg(unix)]
+impl Positioned for std::fs::File {
+    fn read_exact_at_offset(&self, buf: &mut [u8], offset: u64) -> std::io::Result<()> {
+        std::os::unix::fs::FileExt::read_exact_at(self, buf, offset)
+    }
+    fn write_all_at_offset(&self, buf: &[u8], offset: u64) -> std::io::Result<()> {
+        std::os::unix::fs::FileExt::write_all_at(self, buf, offset)
+    }
+}
+
+#[cfg(windows)]
+impl Positioned for std::fs::File {
+    fn read_exact_at_offset(&self, mut buf: &mut [u8], mut offset: u64) -> std::io::Result<()> {
+        while !buf.is_empty() {
+            let n = std::os::windows::fs::FileExt::seek_read(self, buf, offset)?;
+            if n == 0 {
+                return Err(std::io::ErrorKind::UnexpectedEof.into());
+            }
+            buf = &mut buf[n..];
+            offset += n as u64;
+        }
+        Ok(())
+    }
+    fn write_all_at_offset(&self, mut buf: &[u8], mut offset: u64) -> std::io::Result<()> {
+        while !buf.is_empty() {
+            let n = std::os::windows::fs::FileExt::seek_write(self, buf, offset)?;
+            buf = &buf[n..];
+            offset += n as u64;
+        }
+        Ok(())
+    }
 }

@@ -1,4 +1,9 @@
 //! Reports: the ledger, and pictures.
 
 mod ledger;
-pub use ledger::Ledger;
+mod summary;
+
+pub use ledger::{
+    Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, Noise, Pixels, RasterEntry, Ringing, Time,
+    Transfer, peak_memory_bytes, write_whole,
+};

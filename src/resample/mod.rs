@@ -19,4 +19,9 @@ pub use blocks::{Block, Engine};
 pub use convert::Counts;
 pub use patch::MissingCodes;
 pub use plan::{Plan, Size};
+
+/// The symbol of the prefilter that solves the least-squares equations of a B-spline kernel.
+pub fn gram_symbol(kernel: &crate::kernel::Kernel) -> Vec<f64> {
+    least_squares::Projection::gram_symbol(kernel)
+}
 pub use rules::{Outside, Reduce, Rules};

@@ -1,0 +1,242 @@
+//! Options that several commands share, and how their values are read.
+
+use super::progress::Bar;
+use super::{Outcome, print_json};
+use crate::error::{Error, Result};
+use crate::job::{Conduct, Job};
+use crate::kernel::{Extension, Kernel};
+use crate::raster::SampleType;
+use crate::report::Ledger;
+use crate::resample::{Outside, Reduce, Rules};
+use clap::Args;
+use std::io::Write;
+use std::path::PathBuf;
+
+/// How samples are resampled.
+#[derive(Args, Clone)]
+#[command(next_help_heading = "Resampling")]
+pub struct Resampling {
+    /// Kernel that weighs the samples; `regauge kernels` lists them
+    #[arg(long, value_name = "K", default_value = "bspline:3")]
+    pub kernel: String,
+    /// What stands beyond the edges: open, zero, constant:V, replicate, half-symmetric, whole-symmetric, point-symmetric, periodic
+    #[arg(
+        long,
+        value_name = "E",
+        default_value = "half-symmetric",
+        hide_possible_values = true,
+        allow_hyphen_values = true
+    )]
+    pub extend: String,
+    /// Against aliasing where pixels grow: auto (= widen), none, widen, least-squares
+    #[arg(long, value_name = "HOW", default_value = "auto", value_parser = ["auto", "none", "widen", "least-squares"], hide_possible_values = true)]
+    pub reduce: String,
+    /// A code that means "no data", beside NaN and what the file declares
+    #[arg(long, value_name = "V", allow_hyphen_values = true)]
+    pub missing: Option<f64>,
+    /// Share of a pixel's weights that must find samples, or it is missing
+    #[arg(long, value_name = "W", default_value_t = 0.5)]
+    pub min_coverage: f64,
+    /// Type of the output: u8, i8, u16, i16, u32, i32, f32, f64 [default: the input's]
+    #[arg(long = "type", value_name = "TYPE", value_parser = sample_type)]
+    pub sample_type: Option<SampleType>,
+}
+
+/// What becomes of pixels outside the input; apart, since `rescale` has none.
+#[derive(Args, Clone)]
+#[command(next_help_heading = "Resampling")]
+pub struct OutsideOption {
+    /// Output pixels whose centre lies outside the input: missing, or extend
+    #[arg(long, value_name = "WHAT", default_value = "missing", value_parser = ["missing", "extend"], hide_possible_values = true)]
+    pub outside: String,
+}
+
+impl OutsideOption {
+    pub fn value(&self) -> Outside {
+        if self.outside == "extend" { Outside::Extend } else { Outside::Missing }
+    }
+}
+
+/// How the run goes and what it leaves.
+#[derive(Args, Clone)]
+#[command(next_help_heading = "Run")]
+pub struct Running {
+    /// Fail (exit 3) if the signal over the common region changes by more than this share
+    #[arg(long, value_name = "T")]
+    pub tolerance: Option<f64>,
+    /// Memory to work in, such as 256MiB or 2GiB
+    #[arg(long, value_name = "SIZE", default_value = "512MiB", value_parser = memory)]
+    pub memory: u64,
+    /// Threads [default: all cores]
+    #[arg(long, value_name = "N")]
+    pub threads: Option<usize>,
+    /// Replace outputs that exist
+    #[arg(long)]
+    pub overwrite: bool,
+    /// Say nothing but errors
+    #[arg(long, short)]
+    pub quiet: bool,
+    /// Print the ledger as JSON on stdout
+    #[arg(long)]
+    pub json: bool,
+}
+
+/// The choices of a run.
+pub fn rules(resampling: &Resampling, running: &Running, outside: Outside) -> Result<Rules> {
+    let rules = Rules {
+        kernel: Kernel::parse(&resampling.kernel)?,
+        extension: resampling.extend.parse::<Extension>()?,
+        outside,
+        reduce: match resampling.reduce.as_str() {
+            "none" => Reduce::None,
+            "widen" => Reduce::Widen,
+            "least-squares" => Reduce::LeastSquares,
+            _ => Reduce::Auto,
+        },
+        missing: resampling.missing,
+        min_coverage: resampling.min_coverage,
+        sample_type: resampling.sample_type,
+        tolerance: running.tolerance,
+        memory: running.memory,
+        threads: running.threads,
+    };
+    rules.check()?;
+    Ok(rules)
+}
+
+fn sample_type(text: &str) -> Result<SampleType, String> {
+    use SampleType::{F32, F64, I8, I16, I32, U8, U16, U32};
+    [U8, I8, U16, I16, U32, I32, F32, F64]
+        .into_iter()
+        .find(|t| t.name() == text)
+        .ok_or_else(|| "use one of u8, i8, u16, i16, u32, i32, f32, f64".into())
+}
+
+/// A size in bytes, with a decimal or binary unit.
+fn memory(text: &str) -> Result<u64, String> {
+    let split = text.find(|c: char| !(c.is_ascii_digit() || c == '.')).unwrap_or(text.len());
+    let (number, unit) = text.split_at(split);
+    let factor: f64 = match unit.trim().to_ascii_lowercase().as_str() {
+        "" | "b" => 1.0,
+        "kb" | "k" => 1e3,
+        "mb" | "m" => 1e6,
+        "gb" | "g" => 1e9,
+        "tb" | "t" => 1e12,
+        "kib" => 1024.0,
+        "mib" => 1_048_576.0,
+        "gib" => 1_073_741_824.0,
+        "tib" => 1_099_511_627_776.0,
+        _ => return Err("give a number with MB, GB, MiB or GiB, such as 256MiB".into()),
+    };
+    let n: f64 = number.parse().map_err(|_| "give a number with its unit, such as 256MiB".to_owned())?;
+    Ok((n * factor) as u64)
+}
+
+/// One number, or two with a comma between: the same for both axes, or rows first.
+pub fn pair(text: &str) -> Result<(f64, f64), String> {
+    let both = two(text, ',')?;
+    Ok((both.0, both.1.unwrap_or(both.0)))
+}
+
+/// Exactly two numbers with a comma between, rows first.
+pub fn row_and_column(text: &str) -> Result<(f64, f64), String> {
+    match two(text, ',')? {
+        (r, Some(c)) => Ok((r, c)),
+        _ => Err("give two numbers, rows first, such as 1.5,-0.25".into()),
+    }
+}
+
+fn two(text: &str, separator: char) -> Result<(f64, Option<f64>), String> {
+    let number = |t: &str| match t.trim().parse::<f64>() {
+        Ok(v) if v.is_finite() => Ok(v),
+        _ => Err(format!("\"{t}\" is no number")),
+    };
+    match text.split_once(separator) {
+        Some((a, b)) => Ok((number(a)?, Some(number(b)?))),
+        None => Ok((number(text)?, None)),
+    }
+}
+
+/// ROWSxCOLUMNS.
+pub fn size(text: &str) -> Result<(usize, usize), String> {
+    let wrong = || "give rows x columns, such as 600x800".to_owned();
+    let (r, c) = text.split_once(['x', 'X']).ok_or_else(wrong)?;
+    Ok((r.trim().parse().map_err(|_| wrong())?, c.trim().parse().map_err(|_| wrong())?))
+}
+
+/// The command as typed, for the ledger.
+pub fn command_line() -> Vec<String> {
+    std::env::args_os()
+        .map(|a| a.to_string_lossy().into_owned())
+        .enumerate()
+        .map(|(i, a)| if i == 0 { "regauge".into() } else { a })
+        .collect()
+}
+
+/// Runs one job with a progress bar, notes and a summary.
+pub fn run_job(job: &Job, running: &Running, ledger: Option<PathBuf>) -> Result<Ledger> {
+    let conduct = Conduct { command: command_line(), ledger, overwrite: running.overwrite };
+    let bar = Bar::new(&job.output.display().to_string(), running.quiet);
+    let result = job.run(&conduct, &bar);
+    bar.clear();
+    let made = result?;
+    if !running.quiet {
+        say(&made.summary());
+        say(&[format!("ledger: {}", conduct.ledger.unwrap_or_else(|| job.ledger_path()).display())]);
+    }
+    Ok(made)
+}
+
+/// Prints lines to stderr.
+pub fn say(lines: &[String]) {
+    let mut err = std::io::stderr().lock();
+    for line in lines {
+        // Without stderr there is nobody to tell.
+        let _ = writeln!(err, "{line}");
+    }
+}
+
+/// Tells what the input file holds that is not carried over, and warns of kernels that need it.
+pub fn say_notes(path: &std::path::Path, notes: &[String], quiet: bool) {
+    if !quiet {
+        say(&notes.iter().map(|n| format!("note: {}: {n}", path.display())).collect::<Vec<_>>());
+    }
+}
+
+/// Warnings that a kernel deserves before it is used.
+pub fn warn_of_kernel(rules: &Rules, gathers: bool, quiet: bool) {
+    let warning = match rules.kernel.name() {
+        "polynomial" => {
+            Some("one polynomial through a whole line swings towards its ends (Runge's phenomenon)")
+        }
+        "sinc" if gathers => {
+            Some("the sinc looks at every sample for every pixel of a turned raster: this takes long")
+        }
+        _ => None,
+    };
+    if let (Some(w), false) = (warning, quiet) {
+        say(&[format!("warning: {w}")]);
+    }
+}
+
+/// Prints ledgers if asked, and says whether their checks held.
+pub fn conclude(ledgers: &[Ledger], running: &Running) -> Result<Outcome> {
+    if running.json {
+        match ledgers {
+            [one] => print_json(one)?,
+            many => print_json(&serde_json::json!({ "ledgers": many }))?,
+        }
+    }
+    let failed = ledgers.iter().any(Ledger::failed_a_check);
+    Ok(if failed { Outcome::CheckFailed } else { Outcome::Done })
+}
+
+/// Turns an error about a grid or map into one that names the file.
+pub fn about(path: &std::path::Path, e: Error) -> Error {
+    match e {
+        Error::Unfit { problem, mend } => {
+            Error::Unfit { problem: format!("{}: {problem}", path.display()), mend }
+        }
+        other => other,
+    }
+}

@@ -1,0 +1,227 @@
+//! `regauge unify`: several rasters onto one grid.
+
+use super::Outcome;
+use super::common::{
+    OutsideOption, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say, say_notes,
+    warn_of_kernel,
+};
+use crate::error::{Error, Result};
+use crate::grid::{Grid, Span, span};
+use crate::job::{Conduct, Job};
+use crate::map::{Map, MapFile};
+use crate::raster;
+use clap::Args;
+use std::collections::HashMap;
+use std::path::{Path, PathBuf};
+
+/// Several rasters onto one grid, each under its own name in a folder.
+#[derive(Args)]
+#[command(
+    group = clap::ArgGroup::new("grid").required(true).args(["onto", "span"]),
+    after_help = "Examples:\n  \
+        regauge unify year1.tif year2.tif --onto year1.tif --out common\n  \
+        regauge unify a.tif b.tif c.tif --span overlap --pixel 2 --out common\n  \
+        regauge unify round1.tif round2.tif --onto round1.tif --map - --map 2to1.json --out common\n\n\
+        A map goes from its raster's pixels to the pixels of the reference that it names. Each raster is resampled once,\n\
+        whatever lies between it and the common grid."
+)]
+pub struct Arguments {
+    /// Rasters to bring together
+    #[arg(value_name = "IN", required = true)]
+    inputs: Vec<PathBuf>,
+    /// Folder for the results; made if needed
+    #[arg(long, value_name = "DIR")]
+    out: PathBuf,
+    /// The common grid: that of a raster, or a grid file (.json)
+    #[arg(long, value_name = "FILE")]
+    onto: Option<PathBuf>,
+    /// The common grid spans all (union), or what all share (overlap)
+    #[arg(long, value_name = "WHAT", value_parser = ["union", "overlap"], hide_possible_values = true)]
+    span: Option<String>,
+    /// Pixel size of the spanned grid in world units [default: the first input's]
+    #[arg(long, value_name = "P", value_parser = pair, requires = "span")]
+    pixel: Option<(f64, f64)>,
+    /// A map file for each input in order, - for none; may be given several times
+    #[arg(long, value_name = "FILE", allow_hyphen_values = true)]
+    map: Vec<PathBuf>,
+    #[command(flatten)]
+    resampling: Resampling,
+    #[command(flatten)]
+    outside: OutsideOption,
+    #[command(flatten)]
+    running: Running,
+}
+
+pub fn run(a: &Arguments) -> Result<Outcome> {
+    let rules = rules(&a.resampling, &a.running, a.outside.value())?;
+    if a.map.len() > a.inputs.len() {
+        return Err(Error::usage(
+            format!("{} maps for {} inputs", a.map.len(), a.inputs.len()),
+            "give one --map per input in order, with - where there is none",
+        ));
+    }
+    let mut grids = Vec::new();
+    for path in &a.inputs {
+        let source = raster::open(path)?;
+        say_notes(path, &source.header().storage.notes, a.running.quiet);
+        grids.push(source.header().grid.clone());
+    }
+    let maps: Vec<Option<MapFile>> = (0..a.inputs.len())
+        .map(|i| match a.map.get(i).filter(|p| *p != Path::new("-")) {
+            Some(path) => MapFile::read(path).map(Some),
+            None => Ok(None),
+        })
+        .collect::<Result<_>>()?;
+    let (target, name) = common_grid(a, &grids, &maps)?;
+    let mut jobs = Vec::new();
+    let mut names: HashMap<PathBuf, &Path> = HashMap::new();
+    for ((path, grid), map) in a.inputs.iter().zip(&grids).zip(&maps) {
+        let back = way_back(path, grid, map.as_ref(), &target, &name)?;
+        let output = a.out.join(output_name(path, a.running.quiet)?);
+        if let Some(other) = names.insert(output.clone(), path) {
+            return Err(Error::usage(
+                format!("{} and {} would both become {}", other.display(), path.display(), output.display()),
+                "rename one of them, or unify them in two runs",
+            ));
+        }
+        warn_of_kernel(&rules, back.as_axes().is_none(), a.running.quiet);
+        jobs.push(Job { input: path.clone(), output, target: target.clone(), back, rules: rules.clone() });
+    }
+    std::fs::create_dir_all(&a.out).map_err(|e| Error::io(&a.out, "making the folder", e))?;
+    // All that can be refused is refused before the first raster is touched.
+    let conduct = Conduct { command: command_line(), ledger: None, overwrite: a.running.overwrite };
+    for job in &jobs {
+        job.check(&conduct)?;
+    }
+    let ledgers = jobs.iter().map(|job| run_job(job, &a.running, None)).collect::<Result<Vec<_>>>()?;
+    conclude(&ledgers, &a.running)
+}
+
+/// The grid that all go onto, and what to call it in messages.
+fn common_grid(a: &Arguments, grids: &[Grid], maps: &[Option<MapFile>]) -> Result<(Grid, String)> {
+    if let Some(onto) = &a.onto {
+        let is_json = onto.extension().is_some_and(|e| e.eq_ignore_ascii_case("json"));
+        let grid = if is_json { Grid::read(onto)? } else { raster::open(onto)?.header().grid.clone() };
+        return Ok((grid, onto.display().to_string()));
+    }
+    for (path, grid) in a.inputs.iter().zip(grids).skip(1) {
+        grids[0].check_same_crs(grid, (&a.inputs[0].display().to_string(), &path.display().to_string()))?;
+    }
+    // A mapped raster lies where its map puts it: its frame on the reference's lattice, with its own pixels.
+    let mut placed = Vec::new();
+    for ((grid, map), path) in grids.iter().zip(maps).zip(&a.inputs) {
+        placed.push(match map {
+            None => grid.clone(),
+            Some(m) => place_by_map(path, grid, m, &grids[0])?,
+        });
+    }
+    if placed.iter().any(|g| g.world.is_some()) != placed.iter().all(|g| g.world.is_some()) {
+        let lost = placed.iter().position(|g| g.world.is_none()).unwrap_or(0);
+        return Err(Error::unfit(
+            format!("{} has no place in the world, others have", a.inputs[lost].display()),
+            "give it a --map, or a georeference",
+        ));
+    }
+    let which = if a.span.as_deref() == Some("overlap") { Span::Overlap } else { Span::Union };
+    Ok((span(&placed, which, a.pixel)?, "the common grid".into()))
+}
+
+/// The grid of a raster as its map places it in the reference's world. Only affine maps keep a grid a grid.
+fn place_by_map(path: &Path, grid: &Grid, file: &MapFile, first: &Grid) -> Result<Grid> {
+    let map = file.map();
+    if !map.is_affine() {
+        return Err(Error::usage(
+            format!("{}: a projective map gives no grid to span", path.display()),
+            "name the common grid with --onto",
+        ));
+    }
+    let reference = file.reference.as_ref().unwrap_or(first);
+    let at = |r: f64, c: f64| {
+        let (r, c) = map.apply(r, c);
+        reference.world_at(r, c)
+    };
+    let (o, right, down) = (at(0.0, 0.0), at(0.0, 1.0), at(1.0, 0.0));
+    let world = [[right.0 - o.0, down.0 - o.0, o.0], [right.1 - o.1, down.1 - o.1, o.1]];
+    // Without a world of its own the reference's pixels are the world.
+    Ok(Grid { world: Some(world), crs: reference.crs.clone(), unit: reference.unit.clone(), ..grid.clone() })
+}
+
+/// From target positions to positions in the raster.
+fn way_back(path: &Path, grid: &Grid, file: Option<&MapFile>, target: &Grid, name: &str) -> Result<Map> {
+    let Some(file) = file else {
+        target.check_same_crs(grid, (name, &path.display().to_string()))?;
+        if target.world.is_some() && grid.world.is_none() {
+            return Err(Error::unfit(
+                format!("{} has no place in the world, {name} has", path.display()),
+                "give it a --map, or a georeference",
+            ));
+        }
+        return target.to(grid).map_err(|e| about(path, e));
+    };
+    let map = file.map();
+    let onto_reference = match &file.reference {
+        // A reference without a place is known by its size; its pixels are then the target's own.
+        Some(r) if r.world.is_none() && target.world.is_some() => {
+            if (r.rows, r.columns) != (target.rows, target.columns) {
+                return Err(Error::unfit(
+                    format!(
+                        "the map for {} refers to a grid of {} x {} pixels without a place in the world, {name} has {} x {}",
+                        path.display(),
+                        r.rows,
+                        r.columns,
+                        target.rows,
+                        target.columns
+                    ),
+                    "use --onto with the map's reference",
+                ));
+            }
+            Map::IDENTITY
+        }
+        Some(r) => {
+            target.check_same_crs(r, (name, "the map's reference"))?;
+            target.to(r).map_err(|e| about(path, e))?
+        }
+        None => Map::IDENTITY,
+    };
+    let moving = match &file.moving {
+        Some(m) if m != grid => {
+            if m.world.is_none() || grid.world.is_none() {
+                if (m.rows, m.columns) != (grid.rows, grid.columns) {
+                    return Err(Error::unfit(
+                        format!(
+                            "the map was made for a raster of {} x {} pixels, {} has {} x {}",
+                            m.rows,
+                            m.columns,
+                            path.display(),
+                            grid.rows,
+                            grid.columns
+                        ),
+                        "give the map that belongs to this raster",
+                    ));
+                }
+                Map::IDENTITY
+            } else {
+                m.to(grid).map_err(|e| about(path, e))?
+            }
+        }
+        _ => Map::IDENTITY,
+    };
+    Ok(onto_reference.then(&map.invert()?).then(&moving))
+}
+
+/// The input's own name; with .tif where its format is only read.
+fn output_name(path: &Path, quiet: bool) -> Result<PathBuf> {
+    let name = path
+        .file_name()
+        .ok_or_else(|| Error::usage(format!("{} is no file", path.display()), "name a raster file"))?;
+    let name = PathBuf::from(name);
+    let ending = name.extension().map(|e| e.to_string_lossy().to_lowercase()).unwrap_or_default();
+    if matches!(ending.as_str(), "tif" | "tiff" | "btf" | "gtiff" | "npy" | "png") {
+        return Ok(name);
+    }
+    let instead = name.with_extension("tif");
+    if !quiet {
+        say(&[format!("note: {} becomes {}: this format is only read", name.display(), instead.display())]);
+    }
+    Ok(instead)
+}

@@ -1,0 +1,294 @@
+//! The account of a run: sums over samples before and after, and the ledger made of them.
+
+use super::{Job, Progress, reading_windows};
+use crate::error::{Error, Result};
+use crate::map::Map;
+use crate::measure::{Balance, Costs, Frame, closure, step_overshoot};
+use crate::raster::{Digest, Header, SampleType, Samples, Source, Window};
+use crate::report::{
+    Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, Noise, Pixels, RasterEntry, Ringing, Time,
+    Transfer, peak_memory_bytes,
+};
+use crate::resample::{Counts, MissingCodes, Plan, Reduce};
+use crate::with_samples;
+use rayon::prelude::*;
+
+/// Sums over the samples of one raster, band by band.
+pub struct Account {
+    frame: Frame,
+    /// To input positions; the identity for the input itself.
+    back: Map,
+    bands: Vec<Balance>,
+    overshoot: u64,
+}
+
+impl Account {
+    /// For a raster of `size` whose positions `back` takes to input positions, and which shares what lies within `other`.
+    pub fn new(back: &Map, size: (usize, usize), other: (usize, usize), bands: usize) -> Self {
+        Account {
+            frame: Frame::new(back, size, other),
+            back: *back,
+            bands: vec![Balance::default(); bands],
+            overshoot: 0,
+        }
+    }
+
+    /// For the input: positions stay, the frame is the output's, into which `onward` leads.
+    fn of_input(onward: &Map, size: (usize, usize), target: (usize, usize), bands: usize) -> Self {
+        Account {
+            frame: Frame::new(onward, size, target),
+            back: Map::IDENTITY,
+            bands: vec![Balance::default(); bands],
+            overshoot: 0,
+        }
+    }
+
+    /// Adds a window of all bands; counts what lies outside the range of `limits`, band by band.
+    pub fn add(
+        &mut self,
+        window: &Window,
+        samples: &Samples,
+        codes: &MissingCodes,
+        limits: Option<&Account>,
+    ) {
+        let width = window.columns.len();
+        for (b, balance) in self.bands.iter_mut().enumerate() {
+            let range = limits.and_then(|l| l.bands.get(b)).map(|l| l.range).filter(|r| r.0 <= r.1);
+            let start = b * window.area();
+            // Row by row in parallel, merged in order: the same sums for any number of threads.
+            let rows: Vec<(Balance, u64)> = window
+                .rows
+                .clone()
+                .into_par_iter()
+                .map_init(
+                    || (vec![0.0; width], Vec::new()),
+                    |(line, shares), r| {
+                        let at = start + (r - window.rows.start) * width;
+                        with_samples!(samples, v => as_f64(&v[at..at + width], codes, line));
+                        let mut part = Balance::default();
+                        part.add_row(&self.frame, &self.back, r, &window.columns, line, shares);
+                        let over = range
+                            .map_or(0, |(low, high)| line.iter().filter(|v| **v < low || **v > high).count());
+                        (part, over as u64)
+                    },
+                )
+                .collect();
+            for (part, over) in &rows {
+                balance.merge(part);
+                self.overshoot += over;
+            }
+        }
+    }
+
+    /// Missing samples over all bands.
+    pub fn missing(&self) -> u64 {
+        self.bands.iter().map(|b| b.missing).sum()
+    }
+
+    fn total(&self) -> Balance {
+        self.bands.iter().fold(Balance::default(), |mut all, b| {
+            all.merge(b);
+            all
+        })
+    }
+}
+
+/// A stored sample as f64.
+pub(super) trait Number: Copy {
+    fn wide(self) -> f64;
+    fn narrow(v: f64) -> Self;
+}
+macro_rules! numbers {
+    ($($t:ty),*) => {$(impl Number for $t {
+        #[inline(always)]
+        fn wide(self) -> f64 { f64::from(self) }
+        fn narrow(v: f64) -> Self { v as $t }
+    })*};
+}
+numbers!(u8, i8, u16, i16, u32, i32, f32, f64);
+
+/// A row as f64 with NaN for what is missing; codes are compared as the type stores them.
+pub(super) fn as_f64<N: Number>(stored: &[N], codes: &MissingCodes, out: &mut [f64]) {
+    let codes: Vec<f64> = codes
+        .codes
+        .iter()
+        .map(|c| (N::narrow(*c).wide(), *c))
+        // An integer type that cannot hold the code has no such samples.
+        .filter(|(n, c)| size_of::<N>() >= 4 || n == c || (*n as f32) == (*c as f32))
+        .map(|(n, _)| n)
+        .collect();
+    for (d, s) in out.iter_mut().zip(stored) {
+        let v = s.wide();
+        *d = if codes.contains(&v) { f64::NAN } else { v };
+    }
+}
+
+/// What reading the input once tells.
+pub struct Inspected {
+    /// Its sums.
+    pub account: Account,
+    /// Its digest.
+    pub sha256: String,
+}
+
+/// Reads the input once from end to end.
+pub fn inspect(
+    source: &dyn Source,
+    onward: &Map,
+    target: (usize, usize),
+    codes: &MissingCodes,
+    memory: u64,
+    progress: &dyn Progress,
+) -> Result<Inspected> {
+    let header = source.header();
+    let mut digest = Digest::new(header);
+    let mut account =
+        Account::of_input(onward, (header.grid.rows, header.grid.columns), target, header.bands);
+    let (mut done, total) = (0, header.grid.pixels() + target.0 * target.1);
+    for window in reading_windows(header, memory) {
+        if progress.stopped() {
+            return Err(Error::Stopped);
+        }
+        let samples = source.read(0..header.bands, &window)?;
+        digest.feed(&window, &samples);
+        account.add(&window, &samples, codes, None);
+        done += window.area();
+        progress.advance(done as u64, total as u64);
+    }
+    Ok(Inspected { account, sha256: digest.finish(header) })
+}
+
+/// All that a ledger is made of.
+pub struct Run<'a> {
+    pub job: &'a Job,
+    pub command: &'a [String],
+    pub plan: &'a Plan,
+    pub from: &'a Header,
+    pub to: &'a Header,
+    /// Of input and output.
+    pub digests: (String, String),
+    pub before: &'a Account,
+    pub after: &'a Account,
+    pub counts: Counts,
+    pub near_gap: u64,
+    pub costs: Costs,
+    pub seconds: f64,
+}
+
+impl Run<'_> {
+    /// Writes it all down.
+    pub fn ledger(&self) -> Ledger {
+        let (rules, kernel) = (&self.job.rules, &self.job.rules.kernel);
+        let (before, after) = (self.before.total(), self.after.total());
+        let total = (self.to.grid.pixels() * self.to.bands) as u64;
+        let closure = closure(&before, &after);
+        let finite = |v: f64| v.is_finite().then_some(v);
+        let entry = |path: &std::path::Path, header: &Header, sha256: &str| RasterEntry {
+            path: path.to_owned(),
+            sha256: sha256.to_owned(),
+            rows: header.grid.rows,
+            columns: header.grid.columns,
+            bands: header.bands,
+            sample_type: header.sample_type,
+            grid: header.grid.clone(),
+        };
+        let area = {
+            let j = self.job.back.jacobian(0.0, 0.0);
+            (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs()
+        };
+        Ledger {
+            regauge: env!("CARGO_PKG_VERSION").to_owned(),
+            command: self.command.to_vec(),
+            inputs: vec![entry(&self.job.input, self.from, &self.digests.0)],
+            output: entry(&self.job.output, self.to, &self.digests.1),
+            kernel: KernelEntry {
+                name: kernel.name().to_owned(),
+                taps: kernel.taps(),
+                order: kernel.order(),
+                poles: kernel.poles(),
+            },
+            extension: rules.extension.to_string(),
+            values: "density".into(),
+            reduce: reduce_name(self.plan, rules.reduce).into(),
+            method: self.plan.method().into(),
+            pixels: Pixels {
+                total,
+                valid: after.valid,
+                missing: after.missing,
+                clipped_low: self.counts.clipped_low,
+                clipped_high: self.counts.clipped_high,
+                overshoot: self.after.overshoot,
+                near_gap: self.near_gap,
+                moved_off_code: self.counts.moved_off_code,
+            },
+            flux: Flux {
+                before: finite(before.signal.value()),
+                after: finite(after.signal.value()),
+                left_frame: None,
+                rounding: is_integer(self.to.sample_type).then_some(self.counts.rounding * area),
+                closure: closure.and_then(finite),
+                tolerance: rules.tolerance,
+                // A closure that cannot be had (no signal) has nothing to be off.
+                closed: rules.tolerance.map(|t| closure.is_none_or(|c| c.abs() <= t)),
+            },
+            centroid: Centroid { before: before.centroid(), after: after.centroid() },
+            displacement: Displacement {
+                rows: self.costs.displacement.0,
+                columns: self.costs.displacement.1,
+                sigma: self.costs.displacement_sigma,
+                how: "predicted".into(),
+            },
+            blur: Blur {
+                transfer: Transfer {
+                    at_010: self.costs.transfer[0],
+                    at_025: self.costs.transfer[1],
+                    at_040: self.costs.transfer[2],
+                },
+                mtf50: self.costs.mtf50,
+            },
+            ringing: Ringing {
+                step_overshoot: if matches!(self.plan, Plan::Copy { .. }) {
+                    Some(0.0)
+                } else {
+                    step_overshoot(kernel)
+                },
+            },
+            noise: Noise {
+                gain_mean: self.costs.gain[0],
+                gain_min: self.costs.gain[1],
+                gain_max: self.costs.gain[2],
+                lag1_rows: self.costs.lag1_rows,
+                lag1_columns: self.costs.lag1_columns,
+            },
+            time: Time {
+                seconds: self.seconds,
+                megapixels_per_second: total as f64 / 1e6 / self.seconds.max(1e-9),
+                peak_memory_bytes: peak_memory_bytes(),
+            },
+            // A job is made of numbers, names and paths: it always has a JSON form.
+            job: serde_json::to_value(self.job).unwrap_or_default(),
+        }
+    }
+}
+
+fn is_integer(t: SampleType) -> bool {
+    t.integer_range().is_some()
+}
+
+/// What was done against aliasing, as it turned out.
+fn reduce_name(plan: &Plan, asked: Reduce) -> &'static str {
+    use crate::resample::axis::Way;
+    let widened = match plan {
+        Plan::Copy { .. } | Plan::Overlap { .. } => false,
+        Plan::RowsAndColumns { rows, columns, .. } => [rows, columns].iter().any(|a| {
+            matches!(a.way, Way::Widen(_) | Way::WidenThenPrefilter(_) | Way::LeastSquares(_))
+                || matches!(a.way, Way::Fourier(s) if s > 1.0)
+        }),
+        Plan::Gather { stretch, .. } => *stretch != (1.0, 1.0),
+    };
+    match (widened, asked) {
+        (false, _) => "none",
+        (true, Reduce::LeastSquares) => "least-squares",
+        (true, _) => "widen",
+    }
+}

@@ -1,0 +1,322 @@
+//! A job: what a command becomes. It is run, written into the ledger, and replayed from there.
+
+mod account;
+mod costs;
+mod describe;
+
+pub use describe::{BandStatistics, describe};
+
+use crate::error::{Error, Result};
+use crate::grid::Grid;
+use crate::map::Map;
+use crate::raster::{self, CELL, Digest, Header, SampleType, Sink, Source, Window, check_free};
+use crate::report::Ledger;
+use crate::resample::{Counts, Engine, MissingCodes, Outside, Plan, Rules};
+use account::{Account, inspect};
+use serde::{Deserialize, Serialize};
+use std::path::{Path, PathBuf};
+use std::time::Instant;
+
+/// One input resampled to one output: everything that is needed to do it again.
+#[derive(Clone, Debug, PartialEq, Serialize, Deserialize)]
+pub struct Job {
+    /// The raster to resample.
+    pub input: PathBuf,
+    /// Where the result goes; the format follows the ending.
+    pub output: PathBuf,
+    /// The grid of the result.
+    pub target: Grid,
+    /// From a position in the output to the position in the input that it shows.
+    pub back: Map,
+    /// Kernel, extension and the other choices.
+    pub rules: Rules,
+}
+
+/// What a run may do beside its result.
+#[derive(Clone, Debug, Default)]
+pub struct Conduct {
+    /// The command as it was typed, for the ledger.
+    pub command: Vec<String>,
+    /// Where the ledger goes; `None`: OUT + `.ledger.json`.
+    pub ledger: Option<PathBuf>,
+    /// Whether an output that exists is replaced.
+    pub overwrite: bool,
+}
+
+/// Told how the work goes on; may stop it.
+pub trait Progress: Sync {
+    /// `done` of `total` pixels, those read through and those written, are finished. Called from one thread, in order.
+    fn advance(&self, done: u64, total: u64);
+    /// Asked now and then; `true` stops the run with [`Error::Stopped`].
+    fn stopped(&self) -> bool {
+        false
+    }
+}
+
+/// Nobody watches.
+impl Progress for () {
+    fn advance(&self, _: u64, _: u64) {}
+}
+
+/// A job with its input opened and its plan made; nothing written yet.
+struct Ready<'a> {
+    job: &'a Job,
+    source: Box<dyn Source>,
+    plan: Plan,
+    header: Header,
+    codes: MissingCodes,
+    fill: Option<f64>,
+}
+
+impl Job {
+    /// The default place of the ledger: the output's name + `.ledger.json`.
+    pub fn ledger_path(&self) -> PathBuf {
+        let mut name = self.output.file_name().unwrap_or_default().to_os_string();
+        name.push(".ledger.json");
+        self.output.with_file_name(name)
+    }
+
+    /// Opens the input and refuses what cannot be done, before any work. Writes nothing.
+    ///
+    /// # Errors
+    /// Names the file or option, and the mend.
+    pub fn check(&self, conduct: &Conduct) -> Result<()> {
+        let ready = self.ready()?;
+        ready.check_output(conduct)?;
+        ready.check_missing(0)
+    }
+
+    /// Runs the job: writes the output and its ledger.
+    ///
+    /// # Errors
+    /// Whatever stands in the way; then nothing is left under the output's name.
+    pub fn run(&self, conduct: &Conduct, progress: &dyn Progress) -> Result<Ledger> {
+        self.in_pool(|| {
+            let ready = self.ready()?;
+            ready.check_output(conduct)?;
+            ready.check_missing(0)?;
+            let sink = raster::create(&self.output, &ready.header, conduct.overwrite)?;
+            let ledger = ready.carry_out(Some(sink), &conduct.command, progress)?;
+            ledger.write(&conduct.ledger.clone().unwrap_or_else(|| self.ledger_path()))?;
+            Ok(ledger)
+        })
+    }
+
+    /// Runs the job without writing anything: the ledger (with the output's digest) is all that comes out.
+    ///
+    /// # Errors
+    /// As [`Job::run`].
+    pub fn rehearse(&self, progress: &dyn Progress) -> Result<Ledger> {
+        self.in_pool(|| {
+            let ready = self.ready()?;
+            ready.check_missing(0)?;
+            ready.carry_out(None, &[], progress)
+        })
+    }
+
+    /// Runs `work` on as many threads as the rules say.
+    fn in_pool<R: Send>(&self, work: impl FnOnce() -> Result<R> + Send) -> Result<R> {
+        let Some(threads) = self.rules.threads.filter(|t| *t > 0) else { return work() };
+        let pool = rayon::ThreadPoolBuilder::new().num_threads(threads).build();
+        pool.map_err(|e| Error::usage(format!("--threads {threads}: {e}"), "give fewer threads"))?
+            .install(work)
+    }
+
+    fn ready(&self) -> Result<Ready<'_>> {
+        self.rules.check()?;
+        self.target.check()?;
+        let source = raster::open(&self.input)?;
+        let from = source.header();
+        let size = (from.grid.rows, from.grid.columns);
+        let plan = Plan::new(size, (self.target.rows, self.target.columns), &self.back, &self.rules)?;
+        let sample_type = self.rules.sample_type.unwrap_or(from.sample_type);
+        let codes: Vec<f64> =
+            from.missing.into_iter().chain(self.rules.missing).filter(|c| !c.is_nan()).collect();
+        let fill = codes.iter().copied().find(|c| can_hold(sample_type, *c));
+        if let (None, Some(code), Some(_)) = (fill, self.rules.missing, sample_type.integer_range()) {
+            return Err(Error::usage(
+                format!("--missing {code} cannot be stored as {}", sample_type.name()),
+                "choose a code within the type's range, or --type f32",
+            ));
+        }
+        let header = output_header(from, &self.target, sample_type, fill);
+        Ok(Ready { job: self, plan, header, codes: MissingCodes { codes }, fill, source })
+    }
+}
+
+/// Whether a type can hold a code for missing.
+fn can_hold(sample_type: SampleType, code: f64) -> bool {
+    match sample_type.integer_range() {
+        Some((low, high)) => code.fract() == 0.0 && (low..=high).contains(&code),
+        None => true,
+    }
+}
+
+/// The input's header, corrected for the new grid and type.
+fn output_header(from: &Header, target: &Grid, sample_type: SampleType, fill: Option<f64>) -> Header {
+    let mut header = Header { grid: target.clone(), sample_type, missing: fill, ..from.clone() };
+    if let Some((x, y, _)) = &mut header.storage.resolution {
+        // Samples per inch or centimetre follow the pixel size; without a place in the world they follow the counts.
+        let (old, new) = (from.grid.pixel_size(), target.pixel_size());
+        let ratio = if from.grid.world.is_some() && target.world.is_some() {
+            (old.0 / new.0, old.1 / new.1)
+        } else {
+            (target.rows as f64 / from.grid.rows as f64, target.columns as f64 / from.grid.columns as f64)
+        };
+        *x *= ratio.1;
+        *y *= ratio.0;
+    }
+    if fill.is_none() && from.missing.is_some_and(f64::is_nan) && sample_type.integer_range().is_none() {
+        header.missing = Some(f64::NAN);
+    }
+    header
+}
+
+/// Whether two paths name one file.
+fn is_same_file(a: &Path, b: &Path) -> bool {
+    match (a.canonicalize(), b.canonicalize()) {
+        (Ok(a), Ok(b)) => a == b,
+        _ => false,
+    }
+}
+
+impl Ready<'_> {
+    fn check_output(&self, conduct: &Conduct) -> Result<()> {
+        let job = self.job;
+        if is_same_file(&job.input, &job.output) {
+            return Err(Error::usage(
+                format!("{} is input and output at once", job.output.display()),
+                "name another output: measurements are never overwritten by their own resampling",
+            ));
+        }
+        let ledger = conduct.ledger.clone().unwrap_or_else(|| job.ledger_path());
+        if is_same_file(&job.input, &ledger) || ledger == job.output {
+            return Err(Error::usage(
+                format!("{} cannot be the ledger as well", ledger.display()),
+                "name another ledger",
+            ));
+        }
+        check_free(&job.output, conduct.overwrite)?;
+        check_free(&ledger, conduct.overwrite)?;
+        raster::check_writable(&job.output, &self.header)
+    }
+
+    /// Refuses an integer output that would need a code for missing and has none.
+    fn check_missing(&self, missing_in_input: u64) -> Result<()> {
+        if self.header.sample_type.integer_range().is_none() || self.fill.is_some() {
+            return Ok(());
+        }
+        let grid = &self.source.header().grid;
+        let looks_outside = self
+            .plan
+            .looks_outside((grid.rows, grid.columns), (self.header.grid.rows, self.header.grid.columns));
+        let open = self.job.rules.extension == crate::kernel::Extension::Open;
+        let why = if looks_outside && (self.job.rules.outside == Outside::Missing || open) {
+            "some output pixels lie outside the input"
+        } else if missing_in_input > 0 {
+            "some input samples are missing"
+        } else {
+            return Ok(());
+        };
+        let name = self.header.sample_type.name();
+        Err(Error::usage(
+            format!(
+                "{}: {why}, and an output of {name} without a no-data code cannot say so",
+                self.job.input.display()
+            ),
+            "give --missing V (a code that no measurement has), --type f32, or --outside extend",
+        ))
+    }
+
+    fn carry_out(
+        self,
+        mut sink: Option<Box<dyn Sink>>,
+        command: &[String],
+        progress: &dyn Progress,
+    ) -> Result<Ledger> {
+        let started = Instant::now();
+        let job = self.job;
+        let source = self.source.as_ref();
+        let from = source.header();
+        let (size, target) =
+            ((from.grid.rows, from.grid.columns), (self.header.grid.rows, self.header.grid.columns));
+        let onward = job.back.invert()?;
+        let before = inspect(source, &onward, target, &self.codes, job.rules.memory, progress)?;
+        self.check_missing(before.account.missing())?;
+        let engine = Engine {
+            source,
+            target,
+            plan: self.plan.clone(),
+            rules: &job.rules,
+            codes: self.codes.clone(),
+            sample_type: self.header.sample_type,
+            fill: self.fill,
+        };
+        let alignment = sink.as_ref().map_or(1, |s| s.alignment()).max(CELL);
+        let mut digest = Digest::new(&self.header);
+        let mut after = Account::new(&job.back, target, size, self.header.bands);
+        let out_codes = MissingCodes { codes: self.fill.into_iter().collect() };
+        let (mut counts, mut near_gap, mut done) = (Counts::default(), 0, from.grid.pixels() as u64);
+        let total = done + self.header.grid.pixels() as u64;
+        engine.run(alignment, None, &mut |block| {
+            if progress.stopped() {
+                return Err(Error::Stopped);
+            }
+            digest.feed(&block.window, &block.samples);
+            after.add(&block.window, &block.samples, &out_codes, Some(&before.account));
+            counts.add(&block.counts);
+            near_gap += block.near_gap;
+            if let Some(sink) = &mut sink {
+                sink.write(&block.window, &block.samples)?;
+            }
+            done += block.window.area() as u64;
+            progress.advance(done, total);
+            Ok(())
+        })?;
+        if progress.stopped() {
+            return Err(Error::Stopped);
+        }
+        if let Some(sink) = sink {
+            sink.finish()?;
+        }
+        let digests = (before.sha256.clone(), digest.finish(&self.header));
+        let costs = costs::costs(&self.plan, &job.rules, size, target, &job.back);
+        let run = account::Run {
+            job,
+            command,
+            plan: &self.plan,
+            from,
+            to: &self.header,
+            digests,
+            before: &before.account,
+            after: &after,
+            counts,
+            near_gap,
+            costs,
+            seconds: started.elapsed().as_secs_f64(),
+        };
+        Ok(run.ledger())
+    }
+}
+
+/// The windows in which a raster is read once from end to end: aligned to cells, within a share of the memory.
+fn reading_windows(header: &Header, memory: u64) -> Vec<Window> {
+    let per_pixel = (header.bands * header.sample_type.bytes()).max(1);
+    let budget = (memory as usize / 8 / per_pixel).max(CELL * CELL);
+    let width = if header.grid.columns * CELL <= budget {
+        header.grid.columns
+    } else {
+        (budget / CELL / CELL * CELL).max(CELL)
+    };
+    let height = (budget / width / CELL * CELL).clamp(CELL, 16 * CELL);
+    let mut windows = Vec::new();
+    for r in (0..header.grid.rows).step_by(height) {
+        for c in (0..header.grid.columns).step_by(width) {
+            windows.push(Window {
+                rows: r..(r + height).min(header.grid.rows),
+                columns: c..(c + width).min(header.grid.columns),
+            });
+        }
+    }
+    windows
+}

@@ -1,0 +1,228 @@
+//! Flux: signal over the region that two grids have in common, pixel by pixel by the fraction of its area inside.
+
+use super::sum::Sum;
+use crate::map::Map;
+use std::ops::Range;
+
+/// How one raster's pixels lie in the frame of another.
+#[derive(Clone, Debug)]
+pub struct Frame {
+    /// From this raster's positions to the other's.
+    map: Map,
+    /// Rows and columns of the other.
+    other: (f64, f64),
+    /// Share of each row and of each column where the map keeps them apart; their product is the pixel's.
+    shares: Option<(Vec<f64>, Vec<f64>)>,
+    /// Half the extent of a pixel's image, for affine maps.
+    half: (f64, f64),
+}
+
+impl Frame {
+    /// `map` goes from positions of a raster of `own` (rows, columns) to positions in the frame of `other`.
+    pub fn new(map: &Map, own: (usize, usize), other: (usize, usize)) -> Self {
+        let shares = map.as_axes().map(|axes| {
+            // The share of [o - 1/2, o + 1/2] whose image lies in [-1/2, n - 1/2].
+            let along = |count: usize, (step, offset): (f64, f64), n: usize| -> Vec<f64> {
+                (0..count)
+                    .map(|o| {
+                        let (a, b) = ((o as f64 - 0.5) * step + offset, (o as f64 + 0.5) * step + offset);
+                        let (low, high) = (a.min(b), a.max(b));
+                        let inside = high.min(n as f64 - 0.5) - low.max(-0.5);
+                        let share = (inside / (high - low)).clamp(0.0, 1.0);
+                        // Rounding must not shave 1e-16 off every pixel.
+                        if share > 1.0 - 1e-12 { 1.0 } else { share }
+                    })
+                    .collect()
+            };
+            if axes.swapped {
+                (along(own.0, axes.columns, other.1), along(own.1, axes.rows, other.0))
+            } else {
+                (along(own.0, axes.rows, other.0), along(own.1, axes.columns, other.1))
+            }
+        });
+        let m = &map.matrix;
+        let half = (0.5 * (m[0][0].abs() + m[0][1].abs()), 0.5 * (m[1][0].abs() + m[1][1].abs()));
+        Frame { map: *map, other: (other.0 as f64, other.1 as f64), shares, half }
+    }
+
+    /// The fraction of the pixel's area that lies inside the other frame.
+    pub fn share(&self, row: usize, column: usize) -> f64 {
+        if let Some((rows, columns)) = &self.shares {
+            return rows[row] * columns[column];
+        }
+        let (r, c) = (row as f64, column as f64);
+        if self.map.is_affine() {
+            let (x, y) = self.map.apply(r, c);
+            let (hx, hy) = self.half;
+            let (n, m) = self.other;
+            if x - hx >= -0.5 && x + hx <= n - 0.5 && y - hy >= -0.5 && y + hy <= m - 0.5 {
+                return 1.0;
+            }
+            if x + hx <= -0.5 || x - hx >= n - 0.5 || y + hy <= -0.5 || y - hy >= m - 0.5 {
+                return 0.0;
+            }
+        }
+        let corner = |dr: f64, dc: f64| self.map.apply(r + dr, c + dc);
+        let image = vec![corner(-0.5, -0.5), corner(-0.5, 0.5), corner(0.5, 0.5), corner(0.5, -0.5)];
+        if image.iter().any(|p| !(p.0.is_finite() && p.1.is_finite())) {
+            return 0.0;
+        }
+        let whole = area(&image);
+        let (n, m) = self.other;
+        let mut part = image;
+        for side in [
+            (|p: &(f64, f64), _: f64| p.0 + 0.5, n),
+            (|p, n| n - 0.5 - p.0, n),
+            (|p, _| p.1 + 0.5, m),
+            (|p, m| m - 0.5 - p.1, m),
+        ] as [(fn(&(f64, f64), f64) -> f64, f64); 4]
+        {
+            part = clip(&part, |p| side.0(p, side.1));
+        }
+        if whole > 0.0 { (area(&part) / whole).clamp(0.0, 1.0) } else { 0.0 }
+    }
+
+    /// The shares of a stretch of one row; `None` where all are 1.
+    fn row_shares(&self, row: usize, columns: &Range<usize>, out: &mut Vec<f64>) -> bool {
+        if let Some((r, c)) = &self.shares
+            && r[row] == 1.0
+            && c[columns.clone()].iter().all(|s| *s == 1.0)
+        {
+            return false;
+        }
+        out.clear();
+        out.extend(columns.clone().map(|c| self.share(row, c)));
+        out.iter().any(|s| *s != 1.0)
+    }
+}
+
+/// Keeps the part of a polygon where `height` is not negative (Sutherland and Hodgman 1974, CACM 17(1):32-42).
+fn clip(polygon: &[(f64, f64)], height: impl Fn(&(f64, f64)) -> f64) -> Vec<(f64, f64)> {
+    let mut out = Vec::with_capacity(polygon.len() + 1);
+    for (i, p) in polygon.iter().enumerate() {
+        let q = &polygon[(i + 1) % polygon.len()];
+        let (a, b) = (height(p), height(q));
+        if a >= 0.0 {
+            out.push(*p);
+        }
+        if (a > 0.0 && b < 0.0) || (a < 0.0 && b > 0.0) {
+            let t = a / (a - b);
+            out.push((p.0 + t * (q.0 - p.0), p.1 + t * (q.1 - p.1)));
+        }
+    }
+    out
+}
+
+/// The shoelace sum, relative to the first corner so that large coordinates do not cancel.
+fn area(polygon: &[(f64, f64)]) -> f64 {
+    let Some(&(r, c)) = polygon.first() else { return 0.0 };
+    let twice: f64 =
+        polygon.windows(2).map(|w| (w[0].0 - r) * (w[1].1 - c) - (w[1].0 - r) * (w[0].1 - c)).sum();
+    0.5 * twice.abs()
+}
+
+/// What was added up over pixels: signal times area, its modulus, its first moments, and what was seen.
+#[derive(Clone, Copy, Debug, PartialEq)]
+pub struct Balance {
+    /// Signal x area (in input pixels) inside the other frame.
+    pub signal: Sum,
+    /// |signal| x area inside the other frame.
+    pub modulus: Sum,
+    /// Signal x area x row, in input positions.
+    row_moment: Sum,
+    /// Signal x area x column, in input positions.
+    column_moment: Sum,
+    /// Samples that are there.
+    pub valid: u64,
+    /// Samples that are missing.
+    pub missing: u64,
+    /// Least and greatest valid sample.
+    pub range: (f64, f64),
+}
+
+impl Default for Balance {
+    fn default() -> Self {
+        Balance {
+            signal: Sum::default(),
+            modulus: Sum::default(),
+            row_moment: Sum::default(),
+            column_moment: Sum::default(),
+            valid: 0,
+            missing: 0,
+            range: (f64::INFINITY, f64::NEG_INFINITY),
+        }
+    }
+}
+
+impl Balance {
+    /// Adds a stretch of one row; NaN is missing. `back` takes this raster's positions to input positions (the identity
+    /// for the input itself) and, by its Jacobian, tells the pixel's area there.
+    pub fn add_row(
+        &mut self,
+        frame: &Frame,
+        back: &Map,
+        row: usize,
+        columns: &Range<usize>,
+        values: &[f64],
+        shares: &mut Vec<f64>,
+    ) {
+        let partial = frame.row_shares(row, columns, shares);
+        let determinant = |r: f64, c: f64| {
+            let j = back.jacobian(r, c);
+            (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs()
+        };
+        let fixed = back.is_affine().then(|| determinant(0.0, 0.0));
+        const PART: usize = 32;
+        for (p, part) in values.chunks(PART).enumerate() {
+            let start = columns.start + p * PART;
+            // Short plain sums, compensated between them: as exact as need be, and fast.
+            let (mut signal, mut modulus, mut rows, mut cols) = (0.0, 0.0, 0.0, 0.0);
+            let r = row as f64;
+            for (i, v) in part.iter().enumerate() {
+                if v.is_nan() {
+                    self.missing += 1;
+                    continue;
+                }
+                self.valid += 1;
+                self.range = (self.range.0.min(*v), self.range.1.max(*v));
+                let c = (start + i) as f64;
+                let share = if partial { shares[p * PART + i] } else { 1.0 };
+                let weight = share * fixed.unwrap_or_else(|| determinant(r, c));
+                let s = v * weight;
+                signal += s;
+                modulus += s.abs();
+                let (x, y) = back.apply(r, c);
+                rows += s * x;
+                cols += s * y;
+            }
+            self.signal.add(signal);
+            self.modulus.add(modulus);
+            self.row_moment.add(rows);
+            self.column_moment.add(cols);
+        }
+    }
+
+    /// Adds another part.
+    pub fn merge(&mut self, other: &Balance) {
+        self.signal.merge(&other.signal);
+        self.modulus.merge(&other.modulus);
+        self.row_moment.merge(&other.row_moment);
+        self.column_moment.merge(&other.column_moment);
+        self.valid += other.valid;
+        self.missing += other.missing;
+        self.range = (self.range.0.min(other.range.0), self.range.1.max(other.range.1));
+    }
+
+    /// Centre of the signal (row, column) in input positions; `None` where the signal cancels.
+    pub fn centroid(&self) -> Option<[f64; 2]> {
+        let s = self.signal.value();
+        (s.abs() > 1e-12 * self.modulus.value() && s != 0.0)
+            .then(|| [self.row_moment.value() / s, self.column_moment.value() / s])
+    }
+}
+
+/// (after - before) / sum of |before|; `None` if that is 0.
+pub fn closure(before: &Balance, after: &Balance) -> Option<f64> {
+    let scale = before.modulus.value();
+    (scale > 0.0 && scale.is_finite()).then(|| (after.signal.value() - before.signal.value()) / scale)
+}

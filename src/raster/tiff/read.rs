@@ -1,0 +1,468 @@
+//! TIFF files as a [`Source`]: windows decoded chunk by chunk, in parallel.
+
+use super::codec::{ChunkShape, Compression, decode};
+use super::tags::{self, Directories};
+use super::{geo, ome};
+use crate::error::{Error, Result};
+use crate::grid::Grid;
+use crate::raster::storage::{Format, Storage};
+use crate::raster::{Header, Positioned, SampleType, Samples, Source, Window, check_window};
+use crate::with_samples;
+use rayon::prelude::*;
+use std::fs::File;
+use std::ops::Range;
+use std::path::{Path, PathBuf};
+
+/// A chunk larger than this, decoded, is taken for damage.
+const MAX_CHUNK_BYTES: usize = 1 << 30;
+
+/// Pages of one TIFF file as bands.
+pub struct TiffSource {
+    header: Header,
+    path: PathBuf,
+    file: File,
+    big_endian: bool,
+    pages: Vec<Page>,
+}
+
+/// Where the chunks of one page are.
+struct Page {
+    samples: usize,
+    planar: bool,
+    compression: Compression,
+    predictor: u16,
+    /// Rows and columns of a chunk.
+    chunk: (usize, usize),
+    /// Whether the last chunk row is stored cut off (strips) or whole (tiles).
+    tiled: bool,
+    offsets: Vec<u64>,
+    counts: Vec<u64>,
+}
+
+/// What all pages must share.
+#[derive(PartialEq, Clone, Copy, Debug)]
+struct Look {
+    rows: usize,
+    columns: usize,
+    sample_type: SampleType,
+    samples: usize,
+}
+
+impl TiffSource {
+    /// Opens a TIFF file; reads its directories, no samples.
+    ///
+    /// # Errors
+    /// When the file is damaged or uses what Regauge does not read.
+    pub fn open(path: &Path) -> Result<Self> {
+        let mut directories = Directories::read(path)?;
+        let mut storage = Storage { format: Format::Tiff, ..Storage::default() };
+        let mut pages: Vec<Page> = Vec::new();
+        let mut look: Option<Look> = None;
+        let mut reduced = 0;
+        for index in 0..directories.pages.len() {
+            let kind = directories.integer(index, tags::NEW_SUBFILE_TYPE)?.unwrap_or(0);
+            if kind & 1 != 0 && index > 0 {
+                reduced += 1;
+                continue;
+            }
+            if kind & 4 != 0 {
+                return Err(Error::unsupported(
+                    path,
+                    format!("page {} is a transparency mask", index + 1),
+                    "write the mask into the samples as NaN or a no-data code",
+                ));
+            }
+            let (page, this) = read_page(&mut directories, path, index)?;
+            match look {
+                None => {
+                    look = Some(this);
+                    read_storage(&mut directories, index, &page, &mut storage)?;
+                }
+                Some(first) if first != this => {
+                    return Err(Error::unsupported(
+                        path,
+                        format!(
+                            "page {} has {} x {} x {} samples of {}, the first page {} x {} x {} of {}",
+                            index + 1,
+                            this.rows,
+                            this.columns,
+                            this.samples,
+                            this.sample_type.name(),
+                            first.rows,
+                            first.columns,
+                            first.samples,
+                            first.sample_type.name()
+                        ),
+                        "split the file: pages are resampled together only if they are alike",
+                    ));
+                }
+                Some(_) => {}
+            }
+            if directories.pages[index].contains(tiff::tags::Tag::from_u16_exhaustive(tags::SUB_IFDS)) {
+                reduced += 1;
+            }
+            pages.push(page);
+        }
+        let look =
+            look.ok_or_else(|| Error::malformed(path, "directories", "every page is a reduced copy"))?;
+        if reduced > 0 {
+            storage.notes.push(format!("{reduced} reduced-resolution pages are not carried over"));
+        }
+        storage.pages = pages.len();
+        storage.samples_per_pixel = look.samples;
+        let mut grid = Grid::new(look.rows, look.columns);
+        storage.geo_keys = geo::read(&mut directories, &mut grid, &mut storage.notes)?;
+        let bands = pages.len() * look.samples;
+        let mut band_names = Vec::new();
+        if let Some(xml) = storage.description.as_deref().filter(|d| ome::is_ome(d)) {
+            band_names = ome::band_names(xml, bands);
+            if grid.world.is_none()
+                && let Some((world, unit)) = ome::physical_size(xml)
+            {
+                grid.world = Some(world);
+                grid.unit = Some(unit);
+            }
+        }
+        grid.check().map_err(|e| Error::malformed(path, "georeference", e.to_string()))?;
+        let missing = directories.text(0, tags::NO_DATA)?.and_then(|t| parse_no_data(&t, &mut storage.notes));
+        let file = File::open(path).map_err(|e| Error::io(path, "opening", e))?;
+        let header = Header { grid, bands, sample_type: look.sample_type, missing, band_names, storage };
+        Ok(TiffSource { header, path: path.to_owned(), file, big_endian: directories.big_endian, pages })
+    }
+
+    fn decode_chunk(&self, page: &Page, plane: usize, chunk: (usize, usize)) -> Result<Option<Vec<u8>>> {
+        let grid = &self.header.grid;
+        let (down, across) = (grid.rows.div_ceil(page.chunk.0), grid.columns.div_ceil(page.chunk.1));
+        let index = (plane * down + chunk.0) * across + chunk.1;
+        let (offset, count) = (page.offsets[index], page.counts[index]);
+        if count == 0 {
+            return Ok(None);
+        }
+        let place = || format!("chunk {index} at byte {offset}");
+        let shape = self.shape(page, chunk.0);
+        // No codec here makes more than twice the bytes of its worst case; more is damage.
+        if count > 2 * shape.len() as u64 + 4096 {
+            return Err(Error::malformed(
+                &self.path,
+                place(),
+                format!("{count} bytes for {} bytes of samples", shape.len()),
+            ));
+        }
+        let mut stored = vec![0; count as usize];
+        self.file.read_exact_at_offset(&mut stored, offset).map_err(|e| match e.kind() {
+            std::io::ErrorKind::UnexpectedEof => {
+                Error::malformed(&self.path, place(), "the file ends within it")
+            }
+            _ => Error::io(&self.path, "reading samples", e),
+        })?;
+        decode(&stored, page.compression, page.predictor, self.big_endian, shape)
+            .map(Some)
+            .map_err(|e| Error::malformed(&self.path, place(), e))
+    }
+
+    fn shape(&self, page: &Page, chunk_row: usize) -> ChunkShape {
+        let left = self.header.grid.rows - chunk_row * page.chunk.0;
+        ChunkShape {
+            rows: if page.tiled { page.chunk.0 } else { page.chunk.0.min(left) },
+            columns: page.chunk.1,
+            samples: if page.planar { 1 } else { page.samples },
+            bytes: self.header.sample_type.bytes(),
+        }
+    }
+}
+
+impl Source for TiffSource {
+    fn header(&self) -> &Header {
+        &self.header
+    }
+
+    fn read(&self, bands: Range<usize>, window: &Window) -> Result<Samples> {
+        check_window(&self.header, &bands, window)?;
+        let mut out = Samples::zeros(self.header.sample_type, bands.len() * window.area());
+        let samples = self.header.storage.samples_per_pixel;
+        let mut jobs: Vec<(usize, usize, (usize, usize))> = Vec::new();
+        for (p, page) in self.pages.iter().enumerate() {
+            let own: Range<usize> = (p * samples).max(bands.start)..((p + 1) * samples).min(bands.end);
+            if own.is_empty() {
+                continue;
+            }
+            let planes = if page.planar { own.start - p * samples..own.end - p * samples } else { 0..1 };
+            let chunks = |r: &Range<usize>, side: usize| r.start / side..r.end.div_ceil(side);
+            for plane in planes {
+                for r in chunks(&window.rows, page.chunk.0) {
+                    jobs.extend(chunks(&window.columns, page.chunk.1).map(|c| (p, plane, (r, c))));
+                }
+            }
+        }
+        // Batches bound what is decoded and not yet in place.
+        for batch in jobs.chunks(4 * rayon::current_num_threads()) {
+            let decoded: Vec<Option<Vec<u8>>> = batch
+                .par_iter()
+                .map(|(p, plane, chunk)| self.decode_chunk(&self.pages[*p], *plane, *chunk))
+                .collect::<Result<_>>()?;
+            for ((p, plane, chunk), data) in batch.iter().zip(decoded) {
+                let page = &self.pages[*p];
+                let shape = self.shape(page, chunk.0);
+                for band in bands.clone() {
+                    let Some(sample) = band.checked_sub(p * samples).filter(|s| *s < samples) else {
+                        continue;
+                    };
+                    if page.planar && sample != *plane {
+                        continue;
+                    }
+                    let part = ChunkPart {
+                        data: data.as_deref(),
+                        shape,
+                        sample: if page.planar { 0 } else { sample },
+                        origin: (chunk.0 * page.chunk.0, chunk.1 * page.chunk.1),
+                        fill: self.header.missing.unwrap_or(0.0),
+                    };
+                    let at = (band - bands.start) * window.area();
+                    with_samples!(&mut out, v => part.place(&mut v[at..at + window.area()], window));
+                }
+            }
+        }
+        Ok(out)
+    }
+}
+
+/// One sample plane of a decoded chunk, on its way into a window.
+struct ChunkPart<'a> {
+    /// `None` for a chunk that the file does not store.
+    data: Option<&'a [u8]>,
+    shape: ChunkShape,
+    sample: usize,
+    origin: (usize, usize),
+    fill: f64,
+}
+
+/// A sample as bytes in the machine's order.
+pub(in crate::raster) trait Word: Copy + Send + Sync {
+    fn from_bytes(bytes: &[u8]) -> Self;
+    fn push(self, out: &mut Vec<u8>);
+    fn from_f64(v: f64) -> Self;
+}
+
+macro_rules! words {
+    ($($t:ty),*) => {$(
+        impl Word for $t {
+            #[inline(always)]
+            fn from_bytes(bytes: &[u8]) -> Self {
+                let mut word = [0; size_of::<$t>()];
+                word.copy_from_slice(bytes);
+                <$t>::from_ne_bytes(word)
+            }
+            #[inline(always)]
+            fn push(self, out: &mut Vec<u8>) { out.extend_from_slice(&self.to_ne_bytes()) }
+            fn from_f64(v: f64) -> Self { v as $t }
+        }
+    )*};
+}
+words!(u8, i8, u16, i16, u32, i32, f32, f64);
+
+impl ChunkPart<'_> {
+    fn place<W: Word>(&self, out: &mut [W], window: &Window) {
+        let shape = self.shape;
+        let rows = self.origin.0.max(window.rows.start)..(self.origin.0 + shape.rows).min(window.rows.end);
+        let columns =
+            self.origin.1.max(window.columns.start)..(self.origin.1 + shape.columns).min(window.columns.end);
+        let (step, width) = (shape.samples * shape.bytes, window.columns.len());
+        for r in rows {
+            let line = &mut out[(r - window.rows.start) * width..][..width];
+            let line = &mut line[columns.start - window.columns.start..columns.end - window.columns.start];
+            let Some(data) = self.data else {
+                line.fill(W::from_f64(self.fill));
+                continue;
+            };
+            let first = ((r - self.origin.0) * shape.columns + columns.start - self.origin.1) * step
+                + self.sample * shape.bytes;
+            for (v, word) in line.iter_mut().zip(data[first..].chunks(step)) {
+                *v = W::from_bytes(&word[..shape.bytes]);
+            }
+        }
+    }
+}
+
+fn read_page(d: &mut Directories, path: &Path, index: usize) -> Result<(Page, Look)> {
+    let bad = |what: String| Error::malformed(path, format!("page {}", index + 1), what);
+    let unsupported =
+        |what: String, mend: &str| Error::unsupported(path, format!("page {}: {what}", index + 1), mend);
+    let mut need = |tag: u16, name: &str| -> Result<usize> {
+        let v = d.integer(index, tag)?.ok_or_else(|| bad(format!("no {name}")))?;
+        usize::try_from(v).map_err(|_| bad(format!("{name} {v} is too large")))
+    };
+    let (rows, columns) = (need(tags::HEIGHT, "height")?, need(tags::WIDTH, "width")?);
+    if rows == 0 || columns == 0 {
+        return Err(bad(format!("{rows} x {columns} pixels")));
+    }
+    let samples = d.integer(index, tags::SAMPLES_PER_PIXEL)?.unwrap_or(1) as usize;
+    if samples == 0 || samples > 65_535 {
+        return Err(bad(format!("{samples} samples per pixel")));
+    }
+    let bits = d.integers(index, tags::BITS)?;
+    let bit = bits.first().copied().unwrap_or(1);
+    let formats = d.integers(index, tags::SAMPLE_FORMAT)?;
+    let format = formats.first().copied().unwrap_or(1);
+    if bits.iter().any(|b| *b != bit) || formats.iter().any(|f| *f != format) {
+        return Err(unsupported(
+            "samples of different types in one pixel".into(),
+            "store every band in one type",
+        ));
+    }
+    let sample_type = match (format, bit) {
+        (1 | 4, 8) => SampleType::U8,
+        (2, 8) => SampleType::I8,
+        (1 | 4, 16) => SampleType::U16,
+        (2, 16) => SampleType::I16,
+        (1 | 4, 32) => SampleType::U32,
+        (2, 32) => SampleType::I32,
+        (3, 32) => SampleType::F32,
+        (3, 64) => SampleType::F64,
+        (f, b) => {
+            let kind = match f {
+                1 | 4 => "unsigned",
+                2 => "signed",
+                3 => "floating-point",
+                5 | 6 => "complex",
+                _ => "unknown",
+            };
+            return Err(unsupported(
+                format!("samples of {b} bits, {kind}"),
+                "use 8, 16 or 32-bit integers, or 32 or 64-bit floating point",
+            ));
+        }
+    };
+    let code = d.integer(index, tags::COMPRESSION)?.unwrap_or(1);
+    let compression = Compression::from_tag(code).ok_or_else(|| {
+        let name = match code {
+            6 | 7 => "JPEG",
+            34712 => "JPEG 2000",
+            34887 => "LERC",
+            34925 => "LZMA",
+            50002 => "JPEG XL",
+            2..=4 => "fax",
+            _ => "unknown",
+        };
+        unsupported(
+            format!("compression {code} ({name})"),
+            "store it uncompressed, or with LZW, Deflate, PackBits or Zstandard",
+        )
+    })?;
+    let predictor = d.integer(index, tags::PREDICTOR)?.unwrap_or(1);
+    if !(1..=3).contains(&predictor)
+        || (predictor == 3 && !matches!(sample_type, SampleType::F32 | SampleType::F64))
+    {
+        return Err(unsupported(
+            format!("predictor {predictor} on {}", sample_type.name()),
+            "use predictor 1, 2 or 3",
+        ));
+    }
+    if d.integer(index, 266)?.unwrap_or(1) != 1 {
+        return Err(unsupported("reversed bit order within bytes".into(), "write it with FillOrder 1"));
+    }
+    let planar = match d.integer(index, tags::PLANAR)?.unwrap_or(1) {
+        1 => false,
+        2 => samples > 1,
+        p => return Err(bad(format!("planar configuration {p}"))),
+    };
+    let tile = (d.integer(index, tags::TILE_HEIGHT)?, d.integer(index, tags::TILE_WIDTH)?);
+    let (tiled, chunk, where_tag, count_tag) = match tile {
+        (Some(h), Some(w)) => (true, (h as usize, w as usize), tags::TILE_OFFSETS, tags::TILE_COUNTS),
+        _ => {
+            let strip = d.integer(index, tags::ROWS_PER_STRIP)?.unwrap_or(u64::MAX);
+            let strip = usize::try_from(strip).unwrap_or(usize::MAX).clamp(1, rows);
+            (false, (strip, columns), tags::STRIP_OFFSETS, tags::STRIP_COUNTS)
+        }
+    };
+    if chunk.0 == 0 || chunk.1 == 0 {
+        return Err(bad(format!("chunks of {} x {} pixels", chunk.0, chunk.1)));
+    }
+    let in_chunk = if planar { 1 } else { samples };
+    let chunk_bytes =
+        chunk.0.checked_mul(chunk.1).and_then(|p| p.checked_mul(in_chunk * sample_type.bytes()));
+    if chunk_bytes.is_none_or(|b| b > MAX_CHUNK_BYTES) {
+        return Err(Error::Limit {
+            what: format!(
+                "{}: page {}: one chunk of {} x {} pixels",
+                path.display(),
+                index + 1,
+                chunk.0,
+                chunk.1
+            ),
+            needed: format!("{} MiB", chunk_bytes.map_or("too many".into(), |b| (b >> 20).to_string())),
+            limit: format!("{} MiB", MAX_CHUNK_BYTES >> 20),
+            mend: "store the raster in tiles or in smaller strips".into(),
+        });
+    }
+    let planes = if planar { samples } else { 1 };
+    let wanted =
+        rows.div_ceil(chunk.0).checked_mul(columns.div_ceil(chunk.1)).and_then(|c| c.checked_mul(planes));
+    let offsets = d.integers(index, where_tag)?;
+    let mut counts = d.integers(index, count_tag)?;
+    if wanted != Some(offsets.len()) {
+        return Err(bad(format!(
+            "{} chunk offsets where {rows} x {columns} pixels in chunks of {} x {} need {}",
+            offsets.len(),
+            chunk.0,
+            chunk.1,
+            wanted.map_or("too many".into(), |w| w.to_string())
+        )));
+    }
+    if counts.is_empty() && compression == Compression::None {
+        // Some old writers leave the counts out where they follow from the sizes.
+        counts = vec![chunk_bytes.unwrap_or(0) as u64; offsets.len()];
+    }
+    if counts.len() != offsets.len() {
+        return Err(bad(format!("{} chunk sizes for {} chunks", counts.len(), offsets.len())));
+    }
+    let page =
+        Page { samples, planar, compression, predictor: predictor as u16, chunk, tiled, offsets, counts };
+    Ok((page, Look { rows, columns, sample_type, samples }))
+}
+
+fn read_storage(d: &mut Directories, index: usize, page: &Page, storage: &mut Storage) -> Result<()> {
+    storage.compression = page.compression;
+    storage.predictor = page.predictor;
+    storage.planar = page.planar;
+    let shorts = |v: Vec<u64>| v.into_iter().map(|v| v as u16).collect::<Vec<u16>>();
+    storage.photometric = d.integer(index, tags::PHOTOMETRIC)?.map(|v| v as u16);
+    storage.extra_samples = shorts(d.integers(index, tags::EXTRA_SAMPLES)?);
+    storage.color_map = shorts(d.integers(index, tags::COLOR_MAP)?);
+    storage.description = d.text(index, tags::DESCRIPTION)?;
+    for tag in tags::TEXT {
+        if let Some(text) = d.text(index, tag)? {
+            storage.texts.push((tag, text));
+        }
+    }
+    let (x, y) = (d.doubles(index, tags::X_RESOLUTION)?, d.doubles(index, tags::Y_RESOLUTION)?);
+    if let ([x], [y]) = (&x[..], &y[..]) {
+        let unit = d.integer(index, tags::RESOLUTION_UNIT)?.unwrap_or(2) as u16;
+        storage.resolution = Some((*x, *y, unit));
+    }
+    let unknown: Vec<String> = d.pages[index]
+        .iter()
+        .map(|(t, _)| t.to_u16())
+        .filter(|t| !tags::KNOWN.contains(t) && !tags::TEXT.contains(t))
+        .map(|t| t.to_string())
+        .collect();
+    if !unknown.is_empty() {
+        storage.notes.push(format!("tags not carried over: {}", unknown.join(", ")));
+    }
+    Ok(())
+}
+
+fn parse_no_data(text: &str, notes: &mut Vec<String>) -> Option<f64> {
+    let text = text.trim();
+    match text.to_ascii_lowercase().as_str() {
+        "nan" | "+nan" | "-nan" => Some(f64::NAN),
+        "inf" | "+inf" => Some(f64::INFINITY),
+        "-inf" => Some(f64::NEG_INFINITY),
+        t => {
+            let v = t.parse().ok();
+            if v.is_none() && !text.is_empty() {
+                notes.push(format!("the no-data text \"{text}\" is no number and was not used"));
+            }
+            v
+        }
+    }
+}
