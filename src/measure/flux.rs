@@ -2,6 +2,7 @@
 
 use super::sum::Sum;
 use crate::map::Map;
+use crate::simd;
 use std::ops::Range;
 
 /// How one raster's pixels lie in the frame of another.
@@ -167,38 +168,57 @@ impl Balance {
         shares: &mut Vec<f64>,
     ) {
         let partial = frame.row_shares(row, columns, shares);
-        let determinant = |r: f64, c: f64| {
-            let j = back.jacobian(r, c);
-            (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs()
-        };
-        let fixed = back.is_affine().then(|| determinant(0.0, 0.0));
-        const PART: usize = 32;
+        let shares = partial.then_some(&shares[..]);
+        if !back.is_affine() {
+            return self.add_local(back, row, columns, values, shares);
+        }
+        // Row and column in the input are affine in the column: moments need only the sum of signal times column.
+        let m = &back.matrix;
+        let area = (m[0][0] * m[1][1] - m[0][1] * m[1][0]).abs();
+        let mut totals = Totals::default();
+        const PART: usize = 32 * LANES;
         for (p, part) in values.chunks(PART).enumerate() {
-            let start = columns.start + p * PART;
+            let shares = shares.map(|s| &s[p * PART..][..part.len()]);
+            let t = simd::wide(|| Totals::of(part, shares));
             // Short plain sums, compensated between them: as exact as need be, and fast.
-            let (mut signal, mut modulus, mut rows, mut cols) = (0.0, 0.0, 0.0, 0.0);
-            let r = row as f64;
-            for (i, v) in part.iter().enumerate() {
-                if v.is_nan() {
-                    self.missing += 1;
-                    continue;
-                }
-                self.valid += 1;
-                self.range = (self.range.0.min(*v), self.range.1.max(*v));
-                let c = (start + i) as f64;
-                let share = if partial { shares[p * PART + i] } else { 1.0 };
-                let weight = share * fixed.unwrap_or_else(|| determinant(r, c));
-                let s = v * weight;
-                signal += s;
-                modulus += s.abs();
-                let (x, y) = back.apply(r, c);
-                rows += s * x;
-                cols += s * y;
-            }
+            let (r, c) = (row as f64, (columns.start + p * PART) as f64);
+            let (signal, column) = (t.signal * area, t.column * area);
             self.signal.add(signal);
-            self.modulus.add(modulus);
-            self.row_moment.add(rows);
-            self.column_moment.add(cols);
+            self.modulus.add(t.modulus * area);
+            self.row_moment.add((m[0][0] * r + m[0][1] * c + m[0][2]) * signal + m[0][1] * column);
+            self.column_moment.add((m[1][0] * r + m[1][1] * c + m[1][2]) * signal + m[1][1] * column);
+            totals.valid += t.valid;
+            totals.range = (totals.range.0.min(t.range.0), totals.range.1.max(t.range.1));
+        }
+        self.valid += totals.valid;
+        self.missing += values.len() as u64 - totals.valid;
+        self.range = (self.range.0.min(totals.range.0), self.range.1.max(totals.range.1));
+    }
+
+    /// The same where area and position follow a projective map from pixel to pixel.
+    fn add_local(
+        &mut self,
+        back: &Map,
+        row: usize,
+        columns: &Range<usize>,
+        values: &[f64],
+        shares: Option<&[f64]>,
+    ) {
+        for (i, v) in values.iter().enumerate() {
+            if v.is_nan() {
+                self.missing += 1;
+                continue;
+            }
+            let (r, c) = (row as f64, (columns.start + i) as f64);
+            let j = back.jacobian(r, c);
+            let s = v * shares.map_or(1.0, |s| s[i]) * (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs();
+            let (x, y) = back.apply(r, c);
+            self.valid += 1;
+            self.range = (self.range.0.min(*v), self.range.1.max(*v));
+            self.signal.add(s);
+            self.modulus.add(s.abs());
+            self.row_moment.add(s * x);
+            self.column_moment.add(s * y);
         }
     }
 
@@ -218,6 +238,79 @@ impl Balance {
         let s = self.signal.value();
         (s.abs() > 1e-12 * self.modulus.value() && s != 0.0)
             .then(|| [self.row_moment.value() / s, self.column_moment.value() / s])
+    }
+}
+
+/// Sums over some neighbouring samples.
+struct Totals {
+    signal: f64,
+    modulus: f64,
+    /// Signal times the column counted from the first sample.
+    column: f64,
+    valid: u64,
+    range: (f64, f64),
+}
+
+impl Default for Totals {
+    fn default() -> Self {
+        Totals { signal: 0.0, modulus: 0.0, column: 0.0, valid: 0, range: (f64::INFINITY, f64::NEG_INFINITY) }
+    }
+}
+
+/// Sums run in so many lanes, added in a fixed order at the end: vectors, and the same bits on all of them.
+const LANES: usize = 8;
+
+impl Totals {
+    #[inline(always)]
+    fn of(values: &[f64], shares: Option<&[f64]>) -> Self {
+        let mut signal = [0.0; LANES];
+        let mut modulus = [0.0; LANES];
+        let mut column = [0.0; LANES];
+        let mut valid = [0u64; LANES];
+        let (mut low, mut high) = ([f64::INFINITY; LANES], [f64::NEG_INFINITY; LANES]);
+        let mut add = |lane: usize, v: f64, share: f64, at: f64| {
+            let there = !v.is_nan();
+            let s = if there { v * share } else { 0.0 };
+            signal[lane] += s;
+            modulus[lane] += s.abs();
+            column[lane] += s * at;
+            valid[lane] += u64::from(there);
+            // A comparison with NaN is false: the range stays.
+            low[lane] = if v < low[lane] { v } else { low[lane] };
+            high[lane] = if v > high[lane] { v } else { high[lane] };
+        };
+        let (whole, rest) = values.as_chunks::<LANES>();
+        match shares {
+            None => {
+                for (i, v) in whole.iter().enumerate() {
+                    for lane in 0..LANES {
+                        add(lane, v[lane], 1.0, (i * LANES + lane) as f64);
+                    }
+                }
+            }
+            Some(shares) => {
+                for (i, (v, s)) in whole.iter().zip(shares.as_chunks::<LANES>().0).enumerate() {
+                    for lane in 0..LANES {
+                        add(lane, v[lane], s[lane], (i * LANES + lane) as f64);
+                    }
+                }
+            }
+        }
+        for (lane, v) in rest.iter().enumerate() {
+            let at = whole.len() * LANES + lane;
+            add(lane, *v, shares.map_or(1.0, |s| s[at]), at as f64);
+        }
+        let sum = |v: [f64; LANES]| v.iter().sum();
+        Totals {
+            signal: sum(signal),
+            modulus: sum(modulus),
+            column: sum(column),
+            valid: valid.iter().sum(),
+            range: (
+                low.iter().copied().fold(f64::INFINITY, f64::min),
+                high.iter().copied().fold(f64::NEG_INFINITY, f64::max),
+            ),
+        }
     }
 }
 

@@ -129,30 +129,35 @@ impl Axis {
         Reach { outputs, taps, samples }
     }
 
-    /// The most samples that `count` neighbouring outputs can need, wherever they lie: for planning memory.
-    pub fn most_samples(&self, kernel: &Kernel, count: usize) -> (usize, usize) {
-        if matches!(self.way, Way::Fourier(_) | Way::Polynomial) {
-            return (self.source, self.target);
-        }
-        let segment_cost = SEGMENT + SEGMENT / 2 + 2 * WARM_UP + 32;
-        let mut outputs = count;
-        if self.filters_output() {
-            outputs = (count + 2 * segment_cost).min(self.target + 2 * WARM_UP + 32);
-        }
-        let stretch = match self.way {
-            Way::Widen(a)
-            | Way::WidenThenPrefilter(a)
-            | Way::LeastSquares(a)
-            | Way::LeastSquaresCoefficients(a)
-            | Way::Area(a) => a,
-            _ => 1.0,
-        };
-        let mut samples =
-            (outputs as f64 * self.step.abs() + 2.0 * (kernel.radius() + 1.0) * (stretch + 1.0)) as usize + 4;
-        if self.filters_input() {
-            samples = (samples + 2 * segment_cost).min(self.source.max(samples) + 2 * WARM_UP + 64);
+    /// The most samples and outputs that any block of `count` outputs needs when the line is cut into such blocks.
+    pub fn most_needed(&self, kernel: &Kernel, extension: Extension, count: usize) -> (usize, usize) {
+        let (mut samples, mut outputs) = (0, 0);
+        let blocks = self.target.div_ceil(count.max(1));
+        // Beyond some hundred blocks they repeat each other; the ends differ most.
+        let stride = (blocks / 200).max(1);
+        for b in (0..blocks).step_by(stride).chain([blocks - 1]) {
+            let (start, end) = (b * count, ((b + 1) * count).min(self.target));
+            let reach = self.reach(kernel, extension, start as i64..end as i64);
+            samples = samples.max(reach.samples.end.saturating_sub(reach.samples.start) as usize);
+            outputs = outputs.max(reach.outputs.end.saturating_sub(reach.outputs.start) as usize);
         }
         (samples, outputs)
+    }
+
+    /// The most samples that `count` neighbouring coefficients can need, wherever they lie.
+    pub fn most_samples(&self, kernel: &Kernel, count: usize) -> usize {
+        let whole = self.target + 2 * WARM_UP + 64;
+        let segments = SEGMENT + SEGMENT / 2 + 2 * WARM_UP + 32;
+        let outputs =
+            if self.filters_output() { (count + 2 * segments).min(whole.max(count)) } else { count };
+        let stretch = if let Way::LeastSquaresCoefficients(a) = self.way { a } else { 1.0 };
+        let samples =
+            (outputs as f64 * self.step.abs() + 2.0 * (kernel.radius() + 1.0) * (stretch + 1.0)) as usize + 4;
+        if self.filters_input() {
+            (samples + 2 * segments).min(self.source.max(samples) + 2 * WARM_UP + 64)
+        } else {
+            samples
+        }
     }
 }
 

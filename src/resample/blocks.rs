@@ -14,7 +14,7 @@ use super::rows_and_columns as passes;
 use super::rules::{Outside, Rules};
 use super::weights::Weigher;
 use crate::error::{Error, Result};
-use crate::kernel::Extension;
+use crate::kernel::{Extension, SEGMENT};
 use crate::raster::{SampleType, Samples, Source, Window};
 use crate::real::Real;
 use ndarray::Array2;
@@ -124,16 +124,26 @@ impl Engine<'_> {
     fn block_size(&self, alignment: usize) -> Result<Size> {
         let align = alignment.max(64);
         // A part stays for decoding, encoding and the program itself.
-        let budget = self.rules.memory as usize / 10 * 7;
+        let budget = self.rules.memory as usize / 5 * 4;
         let (mut height, mut width) = self.target;
+        // A prefilter computes whole segments: blocks that end with them repeat least.
+        let halve = |v: usize| {
+            let half = v.div_ceil(2);
+            let unit = if half >= SEGMENT && SEGMENT.is_multiple_of(align) { SEGMENT } else { align };
+            if half.next_multiple_of(unit) < v {
+                half.next_multiple_of(unit)
+            } else {
+                half.next_multiple_of(align)
+            }
+        };
         loop {
             let need = self.block_bytes(height, width);
             if need <= budget {
                 return Ok((height, width));
             }
+            // Whole rows are cheap to read and to write; squares are what a turned map wants.
             let turned = matches!(self.plan, Plan::Gather { .. } | Plan::Overlap { .. });
-            let least = if turned { align } else { align.max(512) };
-            let halve = |v: usize| (v / 2).next_multiple_of(align);
+            let least = if turned { align } else { align.max(SEGMENT) };
             if height > least && (!turned || height >= width) {
                 height = halve(height);
             } else if width > align {
@@ -145,7 +155,7 @@ impl Engine<'_> {
                     what: format!("a block of {height} x {width} pixels under {}", self.rules.kernel),
                     needed: format!("{} MiB", need.div_ceil(1 << 20)),
                     limit: format!("--memory {} MiB", self.rules.memory >> 20),
-                    mend: format!("give --memory {}MiB or more", (need / 7 * 10).div_ceil(1 << 20)),
+                    mend: format!("give --memory {}MiB or more", (need / 4 * 5).div_ceil(1 << 20)),
                 });
             }
         }
@@ -153,20 +163,25 @@ impl Engine<'_> {
 
     /// Bytes that a block of this size takes at most.
     fn block_bytes(&self, height: usize, width: usize) -> usize {
+        let (height, width) = (height.min(self.target.0), width.min(self.target.1));
         let header = self.source.header();
+        let (kernel, extension) = (&self.rules.kernel, self.rules.extension);
         let real = if self.computes_in_f64() { 8 } else { 4 };
-        let bands = header.bands;
-        let stored = header.sample_type.bytes() * bands;
-        let out = height.saturating_mul(width).saturating_mul(self.sample_type.bytes() * bands + 8 * real);
+        let stored = header.sample_type.bytes() * header.bands;
+        // Values, and the mask's three responses where samples can be missing.
+        let planes = if self.may_miss() { 4 } else { 1 };
+        let out = height
+            .saturating_mul(width)
+            .saturating_mul(self.sample_type.bytes() * (header.bands + 1) + planes * real);
         let (rows, columns, between) = match &self.plan {
             Plan::Copy { .. } => {
                 return height
                     .saturating_mul(width)
-                    .saturating_mul(stored + self.sample_type.bytes() * bands);
+                    .saturating_mul(stored + self.sample_type.bytes() * header.bands);
             }
             Plan::RowsAndColumns { rows, columns, .. } => {
-                let (r, r_out) = rows.most_samples(&self.rules.kernel, height);
-                let (c, c_out) = columns.most_samples(&self.rules.kernel, width);
+                let (r, r_out) = rows.most_needed(kernel, extension, height);
+                let (c, c_out) = columns.most_needed(kernel, extension, width);
                 (r, c, r.saturating_mul(width) + threads() * 192 * (r + r_out) + threads() * 32 * (c + c_out))
             }
             Plan::Gather { back, .. } | Plan::Overlap { back } => {
@@ -183,18 +198,24 @@ impl Engine<'_> {
                     let whole = n as f64 + 64.0;
                     let length =
                         if self.rules.outside == Outside::Missing { length.min(whole) } else { length };
-                    axis.most_samples(&self.rules.kernel, (length / axis.step) as usize + 64).0
+                    axis.most_samples(kernel, (length / axis.step) as usize + 64)
                 };
                 let (n, m) = self.source_size();
                 let (r, c) = (around(&axes.0, r, n), around(&axes.1, c, m));
-                // Values and mask, each as a plane and between its two passes.
-                (r, c, 4 * r.saturating_mul(c))
+                // A plane and what stands between its two passes; for the mask as well where samples can be missing.
+                (r, c, (if planes > 1 { 4 } else { 2 }) * r.saturating_mul(c))
             }
         };
         rows.saturating_mul(columns)
             .saturating_mul(stored)
             .saturating_add(between.saturating_mul(real))
             .saturating_add(out)
+    }
+
+    /// Whether the source may hold missing samples.
+    fn may_miss(&self) -> bool {
+        let float = matches!(self.source.header().sample_type, SampleType::F32 | SampleType::F64);
+        float || !self.codes.codes.is_empty()
     }
 
     /// The axes that turn a patch into the plane that the gather pass looks at.

@@ -179,50 +179,74 @@ impl Source for TiffSource {
     fn read(&self, bands: Range<usize>, window: &Window) -> Result<Samples> {
         check_window(&self.header, &bands, window)?;
         let mut out = Samples::zeros(self.header.sample_type, bands.len() * window.area());
-        let samples = self.header.storage.samples_per_pixel;
-        let mut jobs: Vec<(usize, usize, (usize, usize))> = Vec::new();
-        for (p, page) in self.pages.iter().enumerate() {
-            let own: Range<usize> = (p * samples).max(bands.start)..((p + 1) * samples).min(bands.end);
-            if own.is_empty() {
-                continue;
-            }
-            let planes = if page.planar { own.start - p * samples..own.end - p * samples } else { 0..1 };
-            let chunks = |r: &Range<usize>, side: usize| r.start / side..r.end.div_ceil(side);
-            for plane in planes {
-                for r in chunks(&window.rows, page.chunk.0) {
-                    jobs.extend(chunks(&window.columns, page.chunk.1).map(|c| (p, plane, (r, c))));
-                }
-            }
-        }
-        // Batches bound what is decoded and not yet in place.
-        for batch in jobs.chunks(4 * rayon::current_num_threads()) {
-            let decoded: Vec<Option<Vec<u8>>> = batch
-                .par_iter()
-                .map(|(p, plane, chunk)| self.decode_chunk(&self.pages[*p], *plane, *chunk))
-                .collect::<Result<_>>()?;
-            for ((p, plane, chunk), data) in batch.iter().zip(decoded) {
-                let page = &self.pages[*p];
-                let shape = self.shape(page, chunk.0);
-                for band in bands.clone() {
-                    let Some(sample) = band.checked_sub(p * samples).filter(|s| *s < samples) else {
-                        continue;
-                    };
-                    if page.planar && sample != *plane {
-                        continue;
-                    }
-                    let part = ChunkPart {
-                        data: data.as_deref(),
-                        shape,
-                        sample: if page.planar { 0 } else { sample },
-                        origin: (chunk.0 * page.chunk.0, chunk.1 * page.chunk.1),
-                        fill: self.header.missing.unwrap_or(0.0),
-                    };
-                    let at = (band - bands.start) * window.area();
-                    with_samples!(&mut out, v => part.place(&mut v[at..at + window.area()], window));
-                }
-            }
+        if window.area() > 0 {
+            with_samples!(&mut out, v => self.fill(v, &bands, window))?;
         }
         Ok(out)
+    }
+}
+
+/// One row of chunks of one page (and plane), and the rows of the window that it fills: for each band its sample within
+/// the chunk and its part of the output.
+struct ChunkRow<'a, W> {
+    page: usize,
+    plane: usize,
+    row: usize,
+    parts: Vec<(usize, &'a mut [W])>,
+}
+
+impl TiffSource {
+    /// Decodes all chunks of a window in parallel, a row of chunks at a time.
+    fn fill<W: Word>(&self, out: &mut [W], bands: &Range<usize>, window: &Window) -> Result<()> {
+        let samples = self.header.storage.samples_per_pixel;
+        let mut jobs: Vec<ChunkRow<W>> = Vec::new();
+        let mut first_of_page: Option<(usize, usize)> = None;
+        for (band, plane) in bands.clone().zip(out.chunks_mut(window.area())) {
+            let (p, sample) = (band / samples, band % samples);
+            let page = &self.pages[p];
+            let mut rest = plane;
+            // The bands of a chunky page share its chunks: they join the jobs that its first band made.
+            let shared = first_of_page.filter(|(known, _)| *known == p && !page.planar).map(|(_, at)| at);
+            let start = shared.unwrap_or(jobs.len());
+            for (i, row) in
+                (window.rows.start / page.chunk.0..window.rows.end.div_ceil(page.chunk.0)).enumerate()
+            {
+                let rows = (row * page.chunk.0).max(window.rows.start)
+                    ..((row + 1) * page.chunk.0).min(window.rows.end);
+                let (part, after) = rest.split_at_mut(rows.len() * window.columns.len());
+                rest = after;
+                let in_chunk = if page.planar { 0 } else { sample };
+                match shared {
+                    Some(at) => jobs[at + i].parts.push((in_chunk, part)),
+                    None => jobs.push(ChunkRow {
+                        page: p,
+                        plane: if page.planar { sample } else { 0 },
+                        row,
+                        parts: vec![(in_chunk, part)],
+                    }),
+                }
+            }
+            first_of_page = Some((p, start));
+        }
+        jobs.into_par_iter().try_for_each(|mut job| {
+            let page = &self.pages[job.page];
+            for column in window.columns.start / page.chunk.1..window.columns.end.div_ceil(page.chunk.1) {
+                let data = self.decode_chunk(page, job.plane, (job.row, column))?;
+                let origin = (job.row * page.chunk.0, column * page.chunk.1);
+                let rows = origin.0.max(window.rows.start)..window.rows.end;
+                for (sample, part) in &mut job.parts {
+                    let from = ChunkPart {
+                        data: data.as_deref(),
+                        shape: self.shape(page, job.row),
+                        sample: *sample,
+                        origin,
+                        fill: self.header.missing.unwrap_or(0.0),
+                    };
+                    from.place(part, &Window { rows: rows.clone(), columns: window.columns.clone() });
+                }
+            }
+            Ok(())
+        })
     }
 }
 
