@@ -8,6 +8,7 @@ pub mod job;
 pub mod kernel;
 pub mod map;
 pub mod measure;
+pub mod pattern;
 pub mod raster;
 mod real;
 pub mod report;

@@ -1,9 +1,22 @@
 //! Reports: the ledger, and pictures.
 
+pub mod colour;
+mod display;
+mod foot;
 mod ledger;
+pub mod maps;
+pub mod palette;
+pub mod picture;
+mod relief;
+mod sheet;
 mod summary;
+pub mod text;
+mod ticks;
 
 pub use ledger::{
     Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, Noise, Pixels, RasterEntry, Ringing, Time,
     Transfer, peak_memory_bytes, write_whole,
 };
+pub use maps::{Group, MapOptions, Panel, Scale, draw_map, draw_maps};
+pub use palette::Palette;
+pub use picture::Picture;
