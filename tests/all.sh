@@ -1,0 +1,18 @@
+#!/bin/sh
+# Runs every test: Rust's own, and those against SciPy, tifffile, scikit-image and matplotlib, which are installed into
+# target/peers first. Needs Rust, a C compiler and Python 3.
+set -eu
+cd "$(dirname "$0")/.."
+peers=target/peers
+if [ ! -x "$peers/bin/python" ] || ! "$peers/bin/python" -c 'import scipy, tifffile, imagecodecs, skimage, matplotlib' 2>/dev/null; then
+    mkdir -p target
+    rm -rf "$peers"
+    python3 -m venv "$peers" || {
+        echo "error: python3 -m venv failed; on Debian install the package python3-venv" >&2
+        exit 1
+    }
+    "$peers/bin/python" -m pip install --quiet --disable-pip-version-check -r tests/peers/requirements.txt
+fi
+REGAUGE_PYTHON="$PWD/$peers/bin/python"
+export REGAUGE_PYTHON
+exec cargo test --quiet "$@"
