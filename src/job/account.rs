@@ -4,12 +4,12 @@ use super::{Job, Progress, reading_windows};
 use crate::error::{Error, Result};
 use crate::map::Map;
 use crate::measure::{Balance, Costs, Frame, closure, step_overshoot};
-use crate::raster::{Digest, Header, SampleType, Samples, Source, Window};
+use crate::raster::{Digest, Header, MissingCodes, Sample, SampleType, Samples, Source, Window};
 use crate::report::{
     Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, Noise, Pixels, RasterEntry, Ringing, Time,
     Transfer, peak_memory_bytes,
 };
-use crate::resample::{Counts, MissingCodes, Plan, Reduce};
+use crate::resample::{Counts, Plan, Reduce};
 use crate::with_samples;
 use rayon::prelude::*;
 
@@ -93,33 +93,11 @@ impl Account {
     }
 }
 
-/// A stored sample as f64.
-pub(super) trait Number: Copy {
-    fn wide(self) -> f64;
-    fn narrow(v: f64) -> Self;
-}
-macro_rules! numbers {
-    ($($t:ty),*) => {$(impl Number for $t {
-        #[inline(always)]
-        fn wide(self) -> f64 { f64::from(self) }
-        fn narrow(v: f64) -> Self { v as $t }
-    })*};
-}
-numbers!(u8, i8, u16, i16, u32, i32, f32, f64);
-
 /// A row as f64 with NaN for what is missing; codes are compared as the type stores them.
-pub(super) fn as_f64<N: Number>(stored: &[N], codes: &MissingCodes, out: &mut [f64]) {
-    let codes: Vec<f64> = codes
-        .codes
-        .iter()
-        .map(|c| (N::narrow(*c).wide(), *c))
-        // An integer type that cannot hold the code has no such samples.
-        .filter(|(n, c)| size_of::<N>() >= 4 || n == c || (*n as f32) == (*c as f32))
-        .map(|(n, _)| n)
-        .collect();
+pub(super) fn as_f64<S: Sample>(stored: &[S], codes: &MissingCodes, out: &mut [f64]) {
+    let codes: Vec<S> = codes.of();
     for (d, s) in out.iter_mut().zip(stored) {
-        let v = s.wide();
-        *d = if codes.contains(&v) { f64::NAN } else { v };
+        *d = if codes.iter().any(|c| s.is(*c)) { f64::NAN } else { s.wide() };
     }
 }
 

@@ -4,8 +4,7 @@ use super::account::as_f64;
 use super::{Progress, reading_windows};
 use crate::error::{Error, Result};
 use crate::measure::Sum;
-use crate::raster::{Digest, Source};
-use crate::resample::MissingCodes;
+use crate::raster::{Digest, MissingCodes, Source};
 use crate::with_samples;
 use serde::Serialize;
 

@@ -93,7 +93,7 @@ pub static FAMILIES: &[Family] = &[
     Family {
         name: "bc-spline",
         parameters: "B,C",
-        listed: &["bc-spline:0.333,0.333"],
+        listed: &["bc-spline:1/3,1/3"],
         about: "the two-parameter cubic; blurs even in place where B > 0",
         build: |p| match p {
             [b, c] if (0.0..=3.0).contains(b) && (0.0..=3.0).contains(c) => {
@@ -110,7 +110,7 @@ pub static FAMILIES: &[Family] = &[
                     Some(smooth),
                 ))
             }
-            _ => Err("two numbers from 0 to 3, such as bc-spline:0.333,0.333"),
+            _ => Err("two numbers from 0 to 3, such as bc-spline:1/3,1/3"),
         },
     },
     Family {
@@ -276,9 +276,7 @@ pub(super) fn parse(text: &str) -> Result<Kernel> {
         return Err(Error::usage(format!("unknown kernel \"{text}\""), suggestion(name)));
     };
     let numbers: Result<Vec<f64>, _> = parameters
-        .map(|p| {
-            p.split(',').map(|v| v.trim().parse::<f64>().ok().filter(|v| v.is_finite()).ok_or(())).collect()
-        })
+        .map(|p| p.split(',').map(|v| number(v.trim()).ok_or(())).collect())
         .unwrap_or_else(|| Ok(Vec::new()));
     let parts = numbers.map_err(|()| "numbers after the colon").and_then(|n| (family.build)(&n)).map_err(
         |needs| {
@@ -306,6 +304,16 @@ pub(super) fn parse(text: &str) -> Result<Kernel> {
         order: parts.order,
         regularity: parts.regularity,
     })
+}
+
+/// A number, or a fraction such as 1/3.
+fn number(text: &str) -> Option<f64> {
+    let parse = |t: &str| t.trim().parse::<f64>().ok();
+    let v = match text.split_once('/') {
+        Some((n, d)) => parse(n)? / parse(d)?,
+        None => parse(text)?,
+    };
+    v.is_finite().then_some(v)
 }
 
 /// The nearest known name, or where to find them.

@@ -6,10 +6,13 @@
 
 use std::f64::consts::PI;
 
+/// Weights at a position: fills the vector, returns the index of the first.
+pub type WeightsAt<'a> = Box<dyn Fn(f64, &mut Vec<f64>) -> i64 + Sync + 'a>;
+
 /// The operator of one axis.
 pub struct AxisOperator<'a> {
     /// Weights at a position: fills the vector, returns the index of the first.
-    pub weights: Box<dyn Fn(f64, &mut Vec<f64>) -> i64 + Sync + 'a>,
+    pub weights: WeightsAt<'a>,
     /// Symbol phi(-b)..=phi(b) of a prefilter on the input's line.
     pub before: Option<Vec<f64>>,
     /// Symbol of a prefilter on the output's line.

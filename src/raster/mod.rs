@@ -7,6 +7,7 @@ mod digest;
 mod memory;
 mod npy;
 mod picture;
+mod sample;
 mod samples;
 mod storage;
 mod tiff;
@@ -14,6 +15,7 @@ mod tiff;
 pub use beside::check_free;
 pub use digest::{CELL, Digest, digest};
 pub use memory::{Collected, MemorySink, Raster};
+pub use sample::{MissingCodes, Sample};
 pub use storage::{Format, Storage};
 pub use tiff::{Compression, GeoKeys};
 

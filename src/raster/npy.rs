@@ -51,7 +51,7 @@ impl NpySource {
         let text = String::from_utf8_lossy(&text).into_owned();
         let descr = value(&text, "descr").ok_or_else(|| bad("no dtype".into()))?;
         let descr = descr.trim_matches(['\'', '"']);
-        let (order, kind) = descr.split_at(descr.len().min(1));
+        let (order, kind) = descr.split_at(descr.chars().next().map_or(0, char::len_utf8));
         let sample_type = match kind {
             "u1" => SampleType::U8,
             "i1" => SampleType::I8,

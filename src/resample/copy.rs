@@ -1,22 +1,12 @@
 //! The pass where nothing need be computed: samples are copied bit for bit.
 
-use super::patch::MissingCodes;
 use crate::error::Result;
-use crate::raster::{Samples, Source, Window};
+use crate::raster::{MissingCodes, Sample, Samples, Source, Window};
 use crate::with_samples;
 use std::ops::Range;
 
 /// Whole-pixel image of one axis: output o shows input `o * step + offset`.
 pub type WholeAxis = (i64, i64);
-
-/// A stored number that can stand for "missing".
-trait Code: Copy + PartialEq {
-    fn of(v: f64) -> Self;
-}
-macro_rules! code {
-    ($($t:ty),*) => {$(impl Code for $t { fn of(v: f64) -> Self { v as $t } })*};
-}
-code!(u8, i8, u16, i16, u32, i32, f32, f64);
 
 /// Copies the block of outputs; returns all bands and how many samples lie outside the input. Samples that equal one of
 /// `codes` become `fill`; what lies outside is `fill` (NaN if `None`).
@@ -44,7 +34,8 @@ pub fn copy(
     } else {
         source.read(0..header.bands, &window)?
     };
-    let other_codes: Vec<f64> = codes.codes.iter().copied().filter(|c| Some(*c) != fill).collect();
+    let other_codes =
+        MissingCodes { codes: codes.codes.iter().copied().filter(|c| Some(*c) != fill).collect() };
     Ok(
         with_samples!(&stored, v => place(v, swapped, header.bands, (&rows, &columns), &other_codes, fill).into()),
     )
@@ -70,12 +61,12 @@ impl Run {
     }
 }
 
-fn place<S: Code>(
+fn place<S: Sample>(
     stored: &[S],
     swapped: bool,
     bands: usize,
     (rows, columns): (&Run, &Run),
-    codes: &[f64],
+    codes: &MissingCodes,
     fill: Option<f64>,
 ) -> Vec<S> {
     let fill = S::of(fill.unwrap_or(f64::NAN));
@@ -90,8 +81,8 @@ fn place<S: Code>(
             }));
         }
     }
-    for code in codes.iter().map(|c| (S::of(*c), *c)).filter(|(s, _)| *s == *s).map(|(s, _)| s) {
-        out.iter_mut().filter(|v| **v == code).for_each(|v| *v = fill);
+    for code in codes.of::<S>() {
+        out.iter_mut().filter(|v| v.is(code)).for_each(|v| *v = fill);
     }
     out
 }

@@ -9,6 +9,7 @@ mod fourier;
 mod gather;
 mod least_squares;
 mod overlap;
+mod passes;
 mod patch;
 mod plan;
 mod rows_and_columns;
@@ -17,7 +18,6 @@ pub mod weights;
 
 pub use blocks::{Block, Engine};
 pub use convert::Counts;
-pub use patch::MissingCodes;
 pub use plan::{Plan, Size};
 
 /// The symbol of the prefilter that solves the least-squares equations of a B-spline kernel.

@@ -2,63 +2,11 @@
 
 use crate::error::Result;
 use crate::kernel::{Extension, Place};
-use crate::raster::{Samples, Source, Window};
+use crate::raster::{MissingCodes, Sample, Samples, Source, Window};
 use crate::real::Real;
 use crate::with_samples;
 use rayon::prelude::*;
 use std::ops::Range;
-
-/// Which stored numbers mean "no data", beside NaN.
-#[derive(Clone, Debug, Default, PartialEq)]
-pub struct MissingCodes {
-    /// The codes, as the user or the file gave them.
-    pub codes: Vec<f64>,
-}
-
-/// A stored sample.
-trait Stored: Copy + Send + Sync {
-    fn to_real<T: Real>(self) -> T;
-    /// The code in this type, if the type can hold it.
-    fn code(v: f64) -> Option<Self>;
-    fn is(self, code: Self) -> bool;
-    fn is_nan(self) -> bool {
-        false
-    }
-    const CAN_BE_NAN: bool = false;
-}
-
-macro_rules! stored_integer {
-    ($($t:ty),*) => {$(
-        impl Stored for $t {
-            #[inline(always)]
-            fn to_real<T: Real>(self) -> T { T::from_f64(f64::from(self)) }
-            fn code(v: f64) -> Option<Self> {
-                let c = v as $t;
-                (f64::from(c) == v).then_some(c)
-            }
-            #[inline(always)]
-            fn is(self, code: Self) -> bool { self == code }
-        }
-    )*};
-}
-stored_integer!(u8, i8, u16, i16, u32, i32);
-
-macro_rules! stored_float {
-    ($($t:ty),*) => {$(
-        impl Stored for $t {
-            #[inline(always)]
-            fn to_real<T: Real>(self) -> T { T::from_f64(f64::from(self)) }
-            // Text such as -3.4028235e38 names the nearest number of the stored type.
-            fn code(v: f64) -> Option<Self> { Some(v as $t) }
-            #[inline(always)]
-            fn is(self, code: Self) -> bool { self == code }
-            #[inline(always)]
-            fn is_nan(self) -> bool { self != self }
-            const CAN_BE_NAN: bool = true;
-        }
-    )*};
-}
-stored_float!(f32, f64);
 
 /// The lines of one axis that a patch reads, and where each extended index finds its sample among them.
 #[derive(Clone, Debug)]
@@ -223,8 +171,8 @@ impl Patch {
     }
 }
 
-fn has_missing<S: Stored>(stored: &[S], missing: &MissingCodes) -> bool {
-    let codes: Vec<S> = missing.codes.iter().filter_map(|c| S::code(*c)).collect();
+fn has_missing<S: Sample>(stored: &[S], missing: &MissingCodes) -> bool {
+    let codes: Vec<S> = missing.of();
     if codes.is_empty() && !S::CAN_BE_NAN {
         return false;
     }
@@ -235,14 +183,14 @@ fn has_missing<S: Stored>(stored: &[S], missing: &MissingCodes) -> bool {
     })
 }
 
-fn expand<S: Stored, T: Real>(
+fn expand<S: Sample, T: Real>(
     stored: &[S],
     axis: &AxisRead,
     missing: &MissingCodes,
     values: &mut [T],
     mask: Option<&mut [T]>,
 ) {
-    let codes: Vec<S> = missing.codes.iter().filter_map(|c| S::code(*c)).collect();
+    let codes: Vec<S> = missing.of();
     let clean = codes.is_empty() && !S::CAN_BE_NAN;
     let there = |v: S| !v.is_nan() && !codes.iter().any(|c| v.is(*c));
     // The common case first: a plain run.

@@ -3,8 +3,8 @@
 
 use regauge::grid::Grid;
 use regauge::map::Map;
-use regauge::raster::{Header, SampleType, Samples, Source, Storage, Window};
-use regauge::resample::{Engine, MissingCodes, Plan, Rules};
+use regauge::raster::{Header, MissingCodes, SampleType, Samples, Source, Storage, Window};
+use regauge::resample::{Engine, Plan, Rules};
 use std::ops::Range;
 
 pub struct Memory {

@@ -8,6 +8,7 @@ use crate::raster::beside::Beside;
 use crate::raster::{Header, SampleType, Samples, Sink, Window};
 use crate::with_samples;
 use rayon::prelude::*;
+use std::borrow::Cow;
 use std::io::{BufWriter, Write};
 use std::path::Path;
 
@@ -190,11 +191,12 @@ impl TiffSink {
             e.push(Entry::short(tags::COLOR_MAP, &s.color_map));
         }
         if page == 0 {
-            if let Some(text) = &s.description {
+            if let Some(text) = s.description.as_deref().and_then(without_shape) {
+                let text = &text;
                 let text = if ome::is_ome(text) {
                     ome::corrected(text, &h.grid, h.sample_type)
                 } else {
-                    text.clone()
+                    text.to_string()
                 };
                 e.push(Entry::text(tags::DESCRIPTION, &text));
             }
@@ -315,6 +317,16 @@ impl Sink for TiffSink {
         let file = self.file.into_inner().map_err(|e| Error::io(&path, "writing", e.into_error()))?;
         file.finish()
     }
+}
+
+/// Array libraries store the array's shape as JSON in the description; it would be wrong on another grid. Other JSON and
+/// plain text stay.
+fn without_shape(text: &str) -> Option<Cow<'_, str>> {
+    let Ok(serde_json::Value::Object(mut map)) = serde_json::from_str(text) else { return Some(text.into()) };
+    if map.remove("shape").is_none() {
+        return Some(text.into());
+    }
+    (!map.is_empty()).then(|| serde_json::Value::Object(map).to_string().into())
 }
 
 /// One directory entry.
