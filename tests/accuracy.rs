@@ -1,4 +1,5 @@
 //! What the method promises: centres, orders of convergence, flat fields, gaps.
+#![allow(clippy::unwrap_used)]
 
 mod common;
 use common::{Memory, run, values};

@@ -1,4 +1,5 @@
 //! The commands as a user meets them: help, refusals, exit codes, ledgers, replay.
+#![allow(clippy::unwrap_used)]
 
 #[path = "common/cli.rs"]
 mod cli;

@@ -1,4 +1,5 @@
 //! Files: round trips of every layout, and damage of every kind.
+#![allow(clippy::unwrap_used)]
 
 #[path = "common/cli.rs"]
 mod cli;

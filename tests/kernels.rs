@@ -1,4 +1,5 @@
 //! Kernels against published formulas and the tables in tests/reference (their heads name the sources).
+#![allow(clippy::unwrap_used)]
 
 use proptest::prelude::*;
 use regauge::kernel::{Extension, Kernel, Place, Prefilter, WARM_UP, segment_window, segments};

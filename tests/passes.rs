@@ -1,4 +1,5 @@
 //! Every pass against the slow truth, and the promise that the cut into blocks does not matter.
+#![allow(clippy::unwrap_used)]
 
 mod common;
 use common::{Memory, run, values, worst};
@@ -242,7 +243,8 @@ fn nothing_is_done_where_nothing_need_be_done() {
             f64::NAN
         }
     };
-    let cases: [(&str, (usize, usize), Map, fn(i64, i64) -> (i64, i64)); 5] = [
+    type From = fn(i64, i64) -> (i64, i64);
+    let cases: [(&str, (usize, usize), Map, From); 5] = [
         ("same", (12, 17), Map::IDENTITY, |r, c| (r, c)),
         ("shift", (12, 17), Map::shift(-3.0, 2.0), |r, c| (r - 3, c + 2)),
         ("quarter turn", (17, 12), Map::affine([[0.0, 1.0, 0.0], [-1.0, 0.0, 16.0]]), |r, c| (c, 16 - r)),

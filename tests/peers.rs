@@ -1,5 +1,6 @@
 //! Live tests against general-purpose libraries. They need a Python with tests/peers/requirements.txt, named by
 //! REGAUGE_PYTHON; `tests/all.sh` provides it.
+#![allow(clippy::unwrap_used)]
 
 use std::process::Command;
 

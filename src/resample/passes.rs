@@ -29,7 +29,7 @@ pub(super) enum Passes<T> {
 
 /// Where the gathered plane's nodes lie: input position = node * step + offset, for rows and columns.
 #[derive(Clone, Copy)]
-struct Lattice {
+pub(super) struct Lattice {
     rows: (f64, f64),
     columns: (f64, f64),
 }

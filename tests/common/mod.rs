@@ -3,7 +3,7 @@
 
 use regauge::grid::Grid;
 use regauge::map::Map;
-use regauge::raster::{Header, MissingCodes, SampleType, Samples, Source, Storage, Window};
+use regauge::raster::{Header, MissingCodes, Sample, SampleType, Samples, Source, Storage, Window};
 use regauge::resample::{Engine, Plan, Rules};
 use std::ops::Range;
 
@@ -64,7 +64,7 @@ pub fn run(
     engine
         .run(1, side, &mut |block| {
             let values: Vec<f64> =
-                regauge::with_samples!(&block.samples, v => v.iter().map(|v| *v as f64).collect());
+                regauge::with_samples!(&block.samples, v => v.iter().map(|v| v.wide()).collect());
             let w = &block.window;
             for (i, r) in w.rows.clone().enumerate() {
                 for (j, c) in w.columns.clone().enumerate() {
