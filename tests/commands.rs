@@ -71,6 +71,7 @@ fn wrong_usage_ends_with_2_before_any_work() {
         ),
         (&["move", "a.npy", "b.npy"], "nothing to do"),
         (&["move", "a.npy", "b.npy", "--scale", "-1"], "not positive"),
+        (&["move", "a.npy", "b.npy", "--turn", "1e300"], "-360 and 360"),
         (&["move", "u.npy", "b.npy", "--shift", "0.75,0"], "--missing"),
         (&["move", "u.npy", "b.npy", "--shift", "0.75,0", "--missing", "-1"], "range"),
         (&["rescale", "a.npy", "a.npy", "--factor", "2", "--overwrite"], "input and output"),
@@ -92,6 +93,9 @@ fn what_cannot_be_done_ends_with_1_and_leaves_nothing() {
     f.regauge(&["rescale", "none.tif", "b.npy", "--factor", "2"]).ends(1).says("none.tif");
     f.regauge(&["rescale", "a.npy", "deep/b.npy", "--factor", "2"]).ends(1).says("deep");
     f.regauge(&["rescale", ".", "b.npy", "--factor", "2"]).ends(1).says("folder");
+    f.regauge(&["rescale", "a.npy", "b.tif", "--size", "99999999x99999999"]).ends(1).says("--memory");
+    f.regauge(&["rescale", "a.npy", "b.tif", "--factor", "1e9"]).ends(1).says("more than the limit");
+    f.regauge(&["rescale", "a.npy", "b.npy", "--factor", "1e-9"]).ends(1).says("would cover");
     f.regauge(&["rescale", "a.npy", "b.png", "--factor", "2"]).ends(1).says(".tif");
     std::fs::write(f.path("text.tif"), "not a raster at all").unwrap();
     f.regauge(&["describe", "text.tif"]).ends(1).says("first bytes");

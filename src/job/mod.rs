@@ -127,6 +127,7 @@ impl Job {
         self.target.check()?;
         let source = raster::open(&self.input)?;
         let from = source.header();
+        check_tables(from, &self.target, self.rules.memory)?;
         let size = (from.grid.rows, from.grid.columns);
         let plan = Plan::new(size, (self.target.rows, self.target.columns), &self.back, &self.rules)?;
         let sample_type = self.rules.sample_type.unwrap_or(from.sample_type);
@@ -142,6 +143,25 @@ impl Job {
         let header = output_header(from, &self.target, sample_type, fill);
         Ok(Ready { job: self, plan, header, codes: MissingCodes { codes }, fill, source })
     }
+}
+
+/// Refuses rasters whose tables alone (digests and places of tiles, shares of rows and columns) would not fit the memory.
+fn check_tables(from: &Header, target: &Grid, memory: u64) -> Result<()> {
+    let tables = |grid: &Grid| -> u128 {
+        let cells =
+            grid.rows.div_ceil(CELL) as u128 * grid.columns.div_ceil(CELL) as u128 * from.bands as u128;
+        48 * cells + 16 * (grid.rows as u128 + grid.columns as u128)
+    };
+    let need = tables(&from.grid).saturating_add(tables(target));
+    if need <= u128::from(memory / 2) {
+        return Ok(());
+    }
+    Err(Error::Limit {
+        what: format!("a raster of {} x {} pixels", target.rows, target.columns),
+        needed: format!("{} MiB for its tables alone", need >> 20),
+        limit: format!("half of --memory {} MiB", memory >> 20),
+        mend: "choose a smaller output, or give more --memory".into(),
+    })
 }
 
 /// Whether a type can hold a code for missing.

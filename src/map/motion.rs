@@ -42,6 +42,12 @@ impl Motion {
         if all.iter().any(|v| !v.is_finite()) {
             return Err(Error::usage("shift, turn, scale, shear and about must be finite numbers", ""));
         }
+        if self.turn.abs() > 1e9 {
+            return Err(Error::usage(
+                format!("--turn {}: so many degrees have no fraction left to turn by", self.turn),
+                "give degrees between -360 and 360",
+            ));
+        }
         if self.scale <= 0.0 {
             return Err(Error::usage(
                 format!("--scale {} is not positive", self.scale),

@@ -83,6 +83,15 @@ impl Plan {
                         "check the map's matrix",
                     ));
                 }
+                if step.abs() > 64.0 * source as f64 {
+                    return Err(Error::unfit(
+                        format!(
+                            "one output pixel would cover {:.3e} input pixels, and the raster has {source}",
+                            step.abs()
+                        ),
+                        "choose a larger factor or a smaller pixel",
+                    ));
+                }
                 let way = choose_way(kernel, step, offset, slack(step), least_squares);
                 if let Way::LeastSquares(_) = way {
                     check_least_squares(rules)?;
