@@ -2,6 +2,8 @@
 #![allow(clippy::unwrap_used)]
 
 mod common;
+#[path = "common/reference.rs"]
+mod reference;
 use common::{Memory, run, values};
 use regauge::kernel::{FAMILIES, Kernel};
 use regauge::map::{Map, Motion};
@@ -259,4 +261,21 @@ fn enlarging_by_a_whole_factor_repeats_blocks_under_nearest() {
             assert_eq!(*v, source.values[(i / (m * k)) / k * m + (i % (m * k)) / k], "k = {k}, {i}");
         }
     }
+}
+
+#[test]
+fn spline_values_agree_with_the_table_inside_and_outside() {
+    // tests/reference/spline_interp_1d.csv: dense solutions at 40 digits.
+    let f = vec![1.0, -2.0, 3.5, 0.25, 4.0, -1.5, 2.0, 7.0, -3.0];
+    let source = Memory::new(1, 9, f, SampleType::F64);
+    let mut seen = 0;
+    for row in reference::rows("spline_interp_1d.csv") {
+        let kernel = format!("bspline:{}", row[1]);
+        let rules = Rules { extension: row[0].replace('_', "-").parse().unwrap(), ..rules(&kernel) };
+        let (x, wanted): (f64, f64) = (row[2].parse().unwrap(), row[3].parse().unwrap());
+        let got = run(&source, (1, 1), &Map::axes((1.0, 0.0), (1.0, x)), &rules, None)[0];
+        assert!((got - wanted).abs() < 7e-12, "{} {kernel} at {x}: {got} instead of {wanted}", row[0]);
+        seen += 1;
+    }
+    assert!(seen > 590, "{seen}");
 }
