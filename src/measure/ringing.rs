@@ -44,9 +44,24 @@ pub fn step_overshoot(kernel: &Kernel) -> Option<f64> {
         weights.iter().enumerate().map(|(m, w)| w * coefficient(first + m as i64)).sum::<f64>()
     };
     let reach = kernel.radius().ceil() + if kernel.is_prefiltered() { 6.0 } else { 1.0 };
-    const PER_PIXEL: usize = 512;
+    const PER_PIXEL: usize = 64;
     let count = (2.0 * reach) as usize * PER_PIXEL;
-    let greatest = (0..count).map(|i| response(i as f64 / PER_PIXEL as f64 - reach)).fold(0.0, f64::max);
+    let (mut best, mut greatest) = (0.0, f64::NEG_INFINITY);
+    for i in 0..count {
+        let x = i as f64 / PER_PIXEL as f64 - reach;
+        let v = response(x);
+        if v > greatest {
+            (best, greatest) = (x, v);
+        }
+    }
+    // The peak may lie between the comb's teeth; between its neighbours there is but one.
+    let (mut low, mut high) = (best - 1.0 / PER_PIXEL as f64, best + 1.0 / PER_PIXEL as f64);
+    for _ in 0..60 {
+        let (p, q) = (low + (high - low) / 3.0, high - (high - low) / 3.0);
+        let (v, w) = (response(p), response(q));
+        greatest = greatest.max(v).max(w);
+        if v < w { low = p } else { high = q }
+    }
     let over = greatest - 1.0;
     Some(if over < 1e-9 { 0.0 } else { over })
 }
