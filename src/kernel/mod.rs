@@ -202,6 +202,19 @@ impl Kernel {
         sum
     }
 
+    /// The cardinal kernel of a prefiltered kernel as a table of its own: the basis weighed by the prefilter's impulse response,
+    /// which is cut where it falls below `cut`. `None` for kernels that are no table.
+    pub fn cardinal_pieces(&self, cut: f64) -> Option<Pieces> {
+        let Shape::Pieces(basis) = &self.shape else { return None };
+        let (inverse, middle) = self.inverse_symbol();
+        let middle = middle as usize;
+        let reach = (0..=middle)
+            .rev()
+            .find(|k| inverse[middle + k].abs() > cut || inverse[middle - k].abs() > cut)
+            .unwrap_or(0);
+        Some(basis.convolved(&inverse[middle - reach..=middle + reach]))
+    }
+
     /// The impulse response of the prefilter, as values around the index `middle`, down to rounding.
     pub fn inverse_symbol(&self) -> (Vec<f64>, i64) {
         let prefilter = Prefilter::<f64>::new(&self.symbol(), 2 * WARM_UP + 1);

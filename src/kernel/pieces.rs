@@ -166,6 +166,24 @@ impl Pieces {
         Pieces { taps: 4, degree: 3, table, centre: 0.0 }
     }
 
+    /// `sum_k q[k] phi(t - k)` for an odd number of `q` about 0.
+    pub fn convolved(&self, q: &[f64]) -> Self {
+        let (reach, width) = (q.len() / 2, self.degree + 1);
+        let taps = self.taps + 2 * reach;
+        let mut table = vec![0.0; taps * width];
+        for (m, row) in table.chunks_exact_mut(width).enumerate() {
+            for (k, q) in q.iter().enumerate() {
+                // phi(t - k) seen from tap m of the wider kernel is its own tap m + k - 2 reach, with k counted from -reach.
+                let Some(own) = (m + k).checked_sub(2 * reach).filter(|own| *own < self.taps) else {
+                    continue;
+                };
+                let piece = &self.table[own * width..(own + 1) * width];
+                row.iter_mut().zip(piece).for_each(|(sum, c)| *sum += q * c);
+            }
+        }
+        Pieces { taps, table, ..self.clone() }
+    }
+
     /// The weight of tap `m` at offset `s`.
     #[inline(always)]
     pub fn weight(&self, m: usize, s: f64) -> f64 {

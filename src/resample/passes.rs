@@ -79,7 +79,8 @@ impl<T: Real> Passes<T> {
             Plan::Gather { back, stretch, local, least_squares } => {
                 let weigher = |axis: &Axis, a: f64| {
                     let a = if *least_squares { 1.0 } else { a };
-                    Weigher::free(kernel, extension, axis.target, a)
+                    // What is cut off is lost in the working precision's rounding.
+                    Weigher::free(kernel, extension, axis.target, a, 1e-2 * T::UNITY_SLACK)
                 };
                 // Under least squares the positions are those of the coarser lattice.
                 let onto = Map::axes((1.0 / r.step, -r.offset / r.step), (1.0 / c.step, -c.offset / c.step));

@@ -3,12 +3,9 @@
 use super::axis::{Axis, Way};
 use super::least_squares::Projection;
 use crate::kernel::windowed::dirichlet;
-use crate::kernel::{Extension, Kernel, Shape};
+use crate::kernel::{Extension, Kernel, Pieces, Shape};
 use crate::real::Real;
 use std::ops::Range;
-
-/// Below this the cardinal kernel of a prefilter is cut where it cannot be had by a recursion, relative to its peak 1.
-const CARDINAL_CUT: f64 = 1e-14;
 
 /// Gives the weights at any position of one line; what every pass asks.
 #[derive(Clone, Debug)]
@@ -25,8 +22,8 @@ enum Kind {
     Plain,
     /// The basis stretched by the factor, normalised.
     Stretched(f64),
-    /// The cardinal kernel of a prefilter, tabulated from the inverse symbol and stretched; `reach` in output samples.
-    Cardinal { stretch: f64, inverse: Vec<f64>, middle: i64, reach: f64 },
+    /// The cardinal kernel of a prefilter, as a table of its own, stretched.
+    Cardinal { stretch: f64, pieces: Pieces },
     /// Projection onto the spline of a coarser pitch.
     Projected(Projection),
     /// Overlap with a cell of this length.
@@ -57,19 +54,16 @@ impl Weigher {
     }
 
     /// For free positions on a line (the gather pass): weights on samples, or on coefficients for an unstretched
-    /// prefiltered kernel. `stretch` is 1 where pixels do not grow.
-    pub fn free(kernel: &Kernel, extension: Extension, source: usize, stretch: f64) -> Self {
+    /// prefiltered kernel. `stretch` is 1 where pixels do not grow; a stretched cardinal kernel is cut below `cut`.
+    pub fn free(kernel: &Kernel, extension: Extension, source: usize, stretch: f64, cut: f64) -> Self {
         let kind = match kernel.shape() {
             Shape::Sinc => Kind::Periodic(stretch),
             Shape::Polynomial => Kind::Barycentric(barycentric(source)),
             _ if stretch <= 1.0 => Kind::Plain,
-            _ if kernel.is_prefiltered() => {
-                let (inverse, middle) = kernel.inverse_symbol();
-                let reach =
-                    inverse.iter().rposition(|v| v.abs() > CARDINAL_CUT).unwrap_or(0) as f64 - middle as f64;
-                Kind::Cardinal { stretch, inverse, middle, reach: reach.max(0.0) + kernel.radius() }
-            }
-            _ => Kind::Stretched(stretch),
+            _ => match kernel.is_prefiltered().then(|| kernel.cardinal_pieces(cut)).flatten() {
+                Some(pieces) => Kind::Cardinal { stretch, pieces },
+                None => Kind::Stretched(stretch),
+            },
         };
         Weigher { kernel: kernel.clone(), source, extension, kind }
     }
@@ -87,7 +81,7 @@ impl Weigher {
         match &self.kind {
             Kind::Plain => self.kernel.radius(),
             Kind::Stretched(a) => self.kernel.radius() * a,
-            Kind::Cardinal { stretch, reach, .. } => reach * stretch,
+            Kind::Cardinal { stretch, pieces } => (pieces.taps as f64 / 2.0 + pieces.centre.abs()) * stretch,
             Kind::Projected(p) => p.radius(),
             Kind::Overlap(a) => 0.5 * a + 0.5,
             Kind::Periodic(_) | Kind::Barycentric(_) => self.source as f64,
@@ -114,17 +108,9 @@ impl Weigher {
                 let radius = self.kernel.radius() * a;
                 self.sampled(x, radius, out, |t| self.kernel.weight(t / a))
             }
-            Kind::Cardinal { stretch, inverse, middle, reach } => {
-                let taps = self.kernel.radius().ceil() as i64 + 1;
-                self.sampled(x, reach * stretch, out, |t| {
-                    let t = t / stretch;
-                    let near = t.floor() as i64;
-                    let low = (near - taps + middle).max(0);
-                    let high = (near + taps + middle).min(inverse.len() as i64 - 1);
-                    (low..=high)
-                        .map(|k| inverse[k as usize] * self.kernel.weight(t - (k - middle) as f64))
-                        .sum()
-                })
+            Kind::Cardinal { stretch, pieces } => {
+                let shrink = 1.0 / stretch;
+                self.sampled(x, self.radius(), out, |t| pieces.value(t * shrink))
             }
             Kind::Projected(p) => self.sampled(x, p.radius(), out, |t| p.weight(t)),
             Kind::Overlap(a) => {
