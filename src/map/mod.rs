@@ -7,6 +7,7 @@
 mod file;
 mod frame;
 mod motion;
+pub mod polygon;
 
 pub use file::MapFile;
 pub use frame::{Anchor, Frame, Rescale, moved, rescaled};

@@ -2,6 +2,7 @@
 
 use super::sum::Sum;
 use crate::map::Map;
+use crate::map::polygon::{area, clip};
 use crate::simd;
 use std::ops::Range;
 
@@ -70,7 +71,7 @@ impl Frame {
         }
         let whole = area(&image);
         let (n, m) = self.other;
-        let mut part = image;
+        let (mut part, mut spare) = (image, Vec::new());
         for side in [
             (|p: &(f64, f64), _: f64| p.0 + 0.5, n),
             (|p, n| n - 0.5 - p.0, n),
@@ -78,7 +79,8 @@ impl Frame {
             (|p, m| m - 0.5 - p.1, m),
         ] as [(fn(&(f64, f64), f64) -> f64, f64); 4]
         {
-            part = clip(&part, |p| side.0(p, side.1));
+            clip(&part, |p| side.0(p, side.1), &mut spare);
+            std::mem::swap(&mut part, &mut spare);
         }
         if whole > 0.0 { (area(&part) / whole).clamp(0.0, 1.0) } else { 0.0 }
     }
@@ -95,31 +97,6 @@ impl Frame {
         out.extend(columns.clone().map(|c| self.share(row, c)));
         out.iter().any(|s| *s != 1.0)
     }
-}
-
-/// Keeps the part of a polygon where `height` is not negative (Sutherland and Hodgman 1974, CACM 17(1):32-42).
-fn clip(polygon: &[(f64, f64)], height: impl Fn(&(f64, f64)) -> f64) -> Vec<(f64, f64)> {
-    let mut out = Vec::with_capacity(polygon.len() + 1);
-    for (i, p) in polygon.iter().enumerate() {
-        let q = &polygon[(i + 1) % polygon.len()];
-        let (a, b) = (height(p), height(q));
-        if a >= 0.0 {
-            out.push(*p);
-        }
-        if (a > 0.0 && b < 0.0) || (a < 0.0 && b > 0.0) {
-            let t = a / (a - b);
-            out.push((p.0 + t * (q.0 - p.0), p.1 + t * (q.1 - p.1)));
-        }
-    }
-    out
-}
-
-/// The shoelace sum, relative to the first corner so that large coordinates do not cancel.
-fn area(polygon: &[(f64, f64)]) -> f64 {
-    let Some(&(r, c)) = polygon.first() else { return 0.0 };
-    let twice: f64 =
-        polygon.windows(2).map(|w| (w[0].0 - r) * (w[1].1 - c) - (w[1].0 - r) * (w[0].1 - c)).sum();
-    0.5 * twice.abs()
 }
 
 /// What was added up over pixels: signal times area, its modulus, its first moments, and what was seen.

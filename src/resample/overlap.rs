@@ -1,10 +1,10 @@
 //! Exact overlap under a turned map: each output pixel's mean over its image in the input, by polygon clipping.
 //!
-//! Sutherland and Hodgman 1974, CACM 17(1):32-42, against the rows and then the columns of the input's cells; areas by
-//! the shoelace sum relative to the first corner.
+//! The image is clipped against the rows and then the columns of the input's cells.
 
 use super::gather::Plane;
 use crate::map::Map;
+use crate::map::polygon::{area as polygon_area, clip};
 use crate::real::Real;
 use ndarray::Array2;
 use ndarray::parallel::prelude::*;
@@ -88,7 +88,7 @@ impl Clip {
             for column in span(&self.row_part, |p| p.1, limits.map(|l| l.1)) {
                 let edge = column as f64 - 0.5;
                 clip_band(&self.row_part, |p| p.1, edge, &mut self.spare, &mut self.cell_part);
-                let area = shoelace(&self.cell_part);
+                let area = polygon_area(&self.cell_part);
                 if area > 0.0 {
                     out.push((row, column, area));
                 }
@@ -105,29 +105,6 @@ fn clip_band(
     spare: &mut Vec<(f64, f64)>,
     out: &mut Vec<(f64, f64)>,
 ) {
-    clip_half(polygon, |p| axis(p) - edge, spare);
-    clip_half(spare, |p| edge + 1.0 - axis(p), out);
-}
-
-/// Keeps the part of a polygon where `height` is not negative.
-fn clip_half(polygon: &[(f64, f64)], height: impl Fn(&(f64, f64)) -> f64, out: &mut Vec<(f64, f64)>) {
-    out.clear();
-    for (i, p) in polygon.iter().enumerate() {
-        let q = &polygon[(i + 1) % polygon.len()];
-        let (a, b) = (height(p), height(q));
-        if a >= 0.0 {
-            out.push(*p);
-        }
-        if (a > 0.0 && b < 0.0) || (a < 0.0 && b > 0.0) {
-            let t = a / (a - b);
-            out.push((p.0 + t * (q.0 - p.0), p.1 + t * (q.1 - p.1)));
-        }
-    }
-}
-
-fn shoelace(polygon: &[(f64, f64)]) -> f64 {
-    let Some(&(r0, c0)) = polygon.first() else { return 0.0 };
-    let twice: f64 =
-        polygon.windows(2).map(|w| (w[0].0 - r0) * (w[1].1 - c0) - (w[1].0 - r0) * (w[0].1 - c0)).sum();
-    0.5 * twice.abs()
+    clip(polygon, |p| axis(p) - edge, spare);
+    clip(spare, |p| edge + 1.0 - axis(p), out);
 }

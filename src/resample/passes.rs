@@ -164,11 +164,15 @@ impl<T: Real> Passes<T> {
                 let Plan::Overlap { back } = &engine.plan else {
                     return Err(Error::unfit("the overlap pass was asked for another plan", ""));
                 };
-                let j = back.jacobian(
-                    (rows.start + rows.end) as f64 / 2.0,
-                    (columns.start + columns.end) as f64 / 2.0,
-                );
-                let radius = (1.0 + j[0][0].abs() + j[0][1].abs(), 1.0 + j[1][0].abs() + j[1][1].abs());
+                // The widest image of a pixel in the block; under a projective map it stands at a corner.
+                let mut radius = (1.0f64, 1.0f64);
+                for r in [rows.start, rows.end] {
+                    for c in [columns.start, columns.end] {
+                        let j = back.jacobian(r as f64, c as f64);
+                        radius.0 = radius.0.max(1.0 + j[0][0].abs() + j[0][1].abs());
+                        radius.1 = radius.1.max(1.0 + j[1][0].abs() + j[1][1].abs());
+                    }
+                }
                 let Some((nr, nc)) = nodes(engine, back, rows, columns, radius, (false, false), None) else {
                     for _ in 0..bands {
                         each(Resampled { values: nothing(rows, columns), mask: None })?;
