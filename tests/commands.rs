@@ -194,6 +194,19 @@ fn a_tolerance_that_is_not_met_ends_with_3() {
     f.regauge(&["rescale", "a.npy", "c.npy", "--factor", "2", "--kernel", "area", "--tolerance", "1e-6"])
         .ends(0);
     assert!(f.list().contains(&"b.npy".to_owned()));
+    // Border pixels that became missing are no lost signal.
+    f.regauge(&[
+        "move",
+        "a.npy",
+        "d.npy",
+        "--shift",
+        "0.8,-1.6",
+        "--kernel",
+        "linear",
+        "--tolerance",
+        "2e-3",
+    ])
+    .ends(0);
 }
 
 #[test]

@@ -248,6 +248,27 @@ impl Ready<'_> {
         ))
     }
 
+    /// The frame of the output pixels that show something, and the way into it from the input. Border pixels whose centre lies
+    /// outside are missing; the strip of input under them must not count as signal that was lost. (Under a turned map the
+    /// strip is no frame, and stays.)
+    fn seen_frame(&self, onward: &Map, target: (usize, usize)) -> (Map, (usize, usize)) {
+        let Plan::RowsAndColumns { rows, columns, .. } = &self.plan else { return (*onward, target) };
+        if self.job.rules.outside == Outside::Extend {
+            return (*onward, target);
+        }
+        let inside = |axis: &crate::resample::axis::Axis| {
+            let first = (0..axis.target).find(|o| axis.is_inside(*o as i64))?;
+            let last = (first..axis.target).rfind(|o| axis.is_inside(*o as i64))?;
+            Some(first..last + 1)
+        };
+        match (inside(rows), inside(columns)) {
+            (Some(r), Some(c)) => {
+                (onward.then(&Map::shift(-(r.start as f64), -(c.start as f64))), (r.len(), c.len()))
+            }
+            _ => (*onward, target),
+        }
+    }
+
     fn carry_out(
         self,
         mut sink: Option<Box<dyn Sink>>,
@@ -261,7 +282,8 @@ impl Ready<'_> {
         let (size, target) =
             ((from.grid.rows, from.grid.columns), (self.header.grid.rows, self.header.grid.columns));
         let onward = job.back.invert()?;
-        let before = inspect(source, &onward, target, &self.codes, job.rules.memory, progress)?;
+        let (into_seen, seen) = self.seen_frame(&onward, target);
+        let before = inspect(source, &into_seen, seen, &self.codes, job.rules.memory, progress)?;
         self.check_missing(before.account.missing())?;
         let engine = Engine {
             source,

@@ -32,7 +32,11 @@ impl Ledger {
             let mut cost =
                 format!("{:.0} % of detail at 4 pixels a cycle is left", 100.0 * self.blur.transfer.at_025);
             if let Some(over) = self.ringing.step_overshoot {
-                cost += &format!("; edges overshoot by up to {:.1} %", 100.0 * over);
+                cost += &if over == 0.0 {
+                    "; edges do not overshoot".to_owned()
+                } else {
+                    format!("; edges overshoot by up to {:.1} %", 100.0 * over)
+                };
             }
             cost += &if moved < 5e-4 {
                 "; nothing is displaced".to_owned()
