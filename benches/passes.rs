@@ -44,6 +44,7 @@ fn passes(c: &mut Criterion) {
                 codes: Default::default(),
                 sample_type: SampleType::F32,
                 fill: None,
+                extras: Default::default(),
             };
             group.bench_function(kernel, |b| {
                 b.iter(|| {

@@ -32,6 +32,7 @@
 //!     codes: Default::default(),
 //!     sample_type: SampleType::F64,
 //!     fill: None,
+//!     extras: Default::default(),
 //! };
 //! engine.run(1, None, &mut |block| {
 //!     let Samples::F64(values) = &block.samples else { unreachable!() };

@@ -126,19 +126,19 @@ fn a_balance_closes_and_finds_the_centre() {
     for r in 0..40 {
         let line: Vec<f64> =
             (0..50).map(|c| if (r, c) == (3, 4) { f64::NAN } else { ((r * 50 + c) % 7) as f64 }).collect();
-        before.add_row(&frame, &Map::IDENTITY, r, &(0..50), &line, &mut shares);
+        before.add_row(&frame, &Map::IDENTITY, true, r, &(0..50), &line, &mut shares);
         // The same in two halves, merged.
         let mut half = Balance::default();
-        half.add_row(&frame, &Map::IDENTITY, r, &(0..23), &line[..23], &mut shares);
-        after.add_row(&frame, &Map::IDENTITY, r, &(23..50), &line[23..], &mut shares);
+        half.add_row(&frame, &Map::IDENTITY, true, r, &(0..23), &line[..23], &mut shares);
+        after.add_row(&frame, &Map::IDENTITY, true, r, &(23..50), &line[23..], &mut shares);
         after.merge(&half);
     }
-    assert_eq!(closure(&before, &after), Some(0.0));
+    assert_eq!(closure(&before, &after, &Sum::default()), Some(0.0));
     assert_eq!((before.valid, before.missing, before.range), (1999, 1, (0.0, 6.0)));
     let (p, q) = (before.centroid().unwrap(), after.centroid().unwrap());
     assert!((p[0] - q[0]).abs() < 1e-12 && (p[1] - q[1]).abs() < 1e-12);
     let nothing = Balance::default();
-    assert_eq!(closure(&nothing, &nothing), None);
+    assert_eq!(closure(&nothing, &nothing, &Sum::default()), None);
 }
 
 #[test]

@@ -37,3 +37,8 @@ fn real_pictures_and_elevations_agree_with_scipy() {
 fn tiffs_go_to_and_from_tifffile_bit_for_bit() {
     run("tiff_peer");
 }
+
+#[test]
+fn totals_are_differences_of_scipys_cumulative_spline() {
+    run("totals_peer");
+}

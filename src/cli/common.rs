@@ -7,7 +7,7 @@ use crate::job::{Conduct, Job};
 use crate::kernel::{Extension, Kernel};
 use crate::raster::SampleType;
 use crate::report::Ledger;
-use crate::resample::{Outside, Reduce, Rules};
+use crate::resample::{Limit, Outside, Reduce, Rules, Values};
 use clap::Args;
 use std::io::Write;
 use std::path::PathBuf;
@@ -16,9 +16,16 @@ use std::path::PathBuf;
 #[derive(Args, Clone)]
 #[command(next_help_heading = "Resampling")]
 pub struct Resampling {
-    /// Kernel that weighs the samples; `regauge kernels` lists them
-    #[arg(long, value_name = "K", default_value = "bspline:3")]
-    pub kernel: String,
+    /// Kernel that weighs the samples; `regauge kernels` lists them [default: bspline:3; nearest for labels]
+    #[arg(long, value_name = "K")]
+    pub kernel: Option<String>,
+    /// What a number is: density (a value per place), total (a sum over the pixel, such as counts), label (a class code),
+    /// cyclic:PERIOD (an angle or phase)
+    #[arg(long, value_name = "WHAT", default_value = "density")]
+    pub values: String,
+    /// Hold overshoot to the range of the samples around: none, neighbours
+    #[arg(long, value_name = "HOW", default_value = "none", value_parser = ["none", "neighbours"], hide_possible_values = true)]
+    pub limit: String,
     /// What stands beyond the edges: open, zero, constant:V, replicate, half-symmetric, whole-symmetric, point-symmetric, periodic
     #[arg(
         long,
@@ -83,8 +90,12 @@ pub struct Running {
 
 /// The choices of a run.
 pub fn rules(resampling: &Resampling, running: &Running, outside: Outside) -> Result<Rules> {
+    let values = resampling.values.parse::<Values>()?;
+    let usual = if values == Values::Label { "nearest" } else { "bspline:3" };
     let rules = Rules {
-        kernel: Kernel::parse(&resampling.kernel)?,
+        kernel: Kernel::parse(resampling.kernel.as_deref().unwrap_or(usual))?,
+        values,
+        limit: if resampling.limit == "neighbours" { Limit::Neighbours } else { Limit::None },
         extension: resampling.extend.parse::<Extension>()?,
         outside,
         reduce: match resampling.reduce.as_str() {

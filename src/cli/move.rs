@@ -9,6 +9,7 @@ use crate::error::{Error, Result};
 use crate::job::Job;
 use crate::map::{Frame, Map, MapFile, Motion, moved};
 use crate::raster;
+use crate::resample::Plan;
 use clap::Args;
 use std::path::PathBuf;
 
@@ -86,7 +87,10 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     };
     motion = motion.then(&options.map()?);
     let frame = if a.frame == "fit" { Frame::Fit } else { Frame::Keep };
-    let (target, back) = moved(grid, &motion, frame).map_err(|e| about(&a.input, e))?;
+    let (mut target, mut back) = moved(grid, &motion, frame).map_err(|e| about(&a.input, e))?;
+    if frame == Frame::Fit {
+        (target, back) = Plan::fit((grid.rows, grid.columns), target, back, &rules)?;
+    }
     warn_of_kernel(&rules, back.as_axes().is_none(), a.running.quiet);
     let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules };
     let ledger = run_job(&job, &a.running, a.ledger.clone())?;

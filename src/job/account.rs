@@ -3,13 +3,13 @@
 use super::{Job, Progress, reading_windows};
 use crate::error::{Error, Result};
 use crate::map::Map;
-use crate::measure::{Balance, Costs, Frame, closure, step_overshoot};
+use crate::measure::{Balance, Costs, Frame, Sum, closure, step_overshoot};
 use crate::raster::{Digest, Header, MissingCodes, Sample, SampleType, Samples, Source, Window};
 use crate::report::{
     Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, Noise, Pixels, RasterEntry, Ringing, Time,
     Transfer, peak_memory_bytes,
 };
-use crate::resample::{Counts, Plan, Reduce};
+use crate::resample::{Counts, Plan, Reduce, Rules, Shifted, Values};
 use crate::with_samples;
 use rayon::prelude::*;
 
@@ -18,27 +18,39 @@ pub struct Account {
     frame: Frame,
     /// To input positions; the identity for the input itself.
     back: Map,
+    /// What the samples are sums over their pixel already.
+    total: bool,
     bands: Vec<Balance>,
+    /// Of totals that go in: what lies in the frame of the output, for its centre.
+    framed: Vec<Balance>,
     overshoot: u64,
 }
 
 impl Account {
     /// For a raster of `size` whose positions `back` takes to input positions, and which shares what lies within `other`.
-    pub fn new(back: &Map, size: (usize, usize), other: (usize, usize), bands: usize) -> Self {
-        Account {
-            frame: Frame::new(back, size, other),
-            back: *back,
-            bands: vec![Balance::default(); bands],
-            overshoot: 0,
-        }
+    /// Of totals every pixel counts whole: it holds nothing but what it was given.
+    pub fn new(back: &Map, size: (usize, usize), other: (usize, usize), bands: usize, total: bool) -> Self {
+        let frame = if total { Frame::whole(size) } else { Frame::new(back, size, other) };
+        let bands = vec![Balance::default(); bands];
+        Account { frame, back: *back, total, bands, framed: Vec::new(), overshoot: 0 }
     }
 
     /// For the input: positions stay, the frame is the output's, into which `onward` leads.
-    fn of_input(onward: &Map, size: (usize, usize), target: (usize, usize), bands: usize) -> Self {
+    fn of_input(
+        onward: &Map,
+        size: (usize, usize),
+        target: (usize, usize),
+        bands: usize,
+        total: bool,
+    ) -> Self {
+        let bands = vec![Balance::default(); bands];
+        let framed = if total { bands.clone() } else { Vec::new() };
         Account {
             frame: Frame::new(onward, size, target),
             back: Map::IDENTITY,
-            bands: vec![Balance::default(); bands],
+            total,
+            bands,
+            framed,
             overshoot: 0,
         }
     }
@@ -52,11 +64,15 @@ impl Account {
         limits: Option<&Account>,
     ) {
         let width = window.columns.len();
+        let by_area = !self.total;
+        let whole = Frame::whole((window.rows.end, window.columns.end));
+        // Totals that go in count wherever they lie; what lies in the output's frame is added up beside.
+        let frame = if self.framed.is_empty() { &self.frame } else { &whole };
         for (b, balance) in self.bands.iter_mut().enumerate() {
             let range = limits.and_then(|l| l.bands.get(b)).map(|l| l.range).filter(|r| r.0 <= r.1);
             let start = b * window.area();
             // Row by row in parallel, merged in order: the same sums for any number of threads.
-            let rows: Vec<(Balance, u64)> = window
+            let rows: Vec<(Balance, Balance, u64)> = window
                 .rows
                 .clone()
                 .into_par_iter()
@@ -65,16 +81,21 @@ impl Account {
                     |(line, shares), r| {
                         let at = start + (r - window.rows.start) * width;
                         with_samples!(samples, v => as_f64(&v[at..at + width], codes, line));
-                        let mut part = Balance::default();
-                        part.add_row(&self.frame, &self.back, r, &window.columns, line, shares);
+                        let (mut part, mut framed) = (Balance::default(), Balance::default());
+                        let back = &self.back;
+                        part.add_row(frame, back, by_area, r, &window.columns, line, shares);
+                        if self.total {
+                            framed.add_row(&self.frame, back, by_area, r, &window.columns, line, shares);
+                        }
                         let over = range
                             .map_or(0, |(low, high)| line.iter().filter(|v| **v < low || **v > high).count());
-                        (part, over as u64)
+                        (part, framed, over as u64)
                     },
                 )
                 .collect();
-            for (part, over) in &rows {
+            for (part, framed, over) in &rows {
                 balance.merge(part);
+                self.framed.get_mut(b).into_iter().for_each(|f| f.merge(framed));
                 self.overshoot += over;
             }
         }
@@ -85,12 +106,26 @@ impl Account {
         self.bands.iter().map(|b| b.missing).sum()
     }
 
-    fn total(&self) -> Balance {
-        self.bands.iter().fold(Balance::default(), |mut all, b| {
-            all.merge(b);
-            all
-        })
+    fn sum(&self) -> Balance {
+        add_up(&self.bands)
     }
+
+    /// Centre of what lies in the frame that input and output share.
+    fn centroid(&self) -> Option<[f64; 2]> {
+        if self.framed.is_empty() { self.sum().centroid() } else { add_up(&self.framed).centroid() }
+    }
+
+    /// Whether some valid sample is below 0.
+    pub fn has_negative(&self) -> bool {
+        self.bands.iter().any(|b| b.range.0 < 0.0)
+    }
+}
+
+fn add_up(bands: &[Balance]) -> Balance {
+    bands.iter().fold(Balance::default(), |mut all, b| {
+        all.merge(b);
+        all
+    })
 }
 
 /// A row as f64 with NaN for what is missing; codes are compared as the type stores them.
@@ -115,15 +150,16 @@ pub fn inspect(
     onward: &Map,
     target: (usize, usize),
     codes: &MissingCodes,
-    memory: u64,
+    rules: &Rules,
     progress: &dyn Progress,
 ) -> Result<Inspected> {
     let header = source.header();
     let mut digest = Digest::new(header);
+    let total = rules.values == Values::Total;
     let mut account =
-        Account::of_input(onward, (header.grid.rows, header.grid.columns), target, header.bands);
+        Account::of_input(onward, (header.grid.rows, header.grid.columns), target, header.bands, total);
     let (mut done, total) = (0, header.grid.pixels() + target.0 * target.1);
-    for window in reading_windows(header, memory) {
+    for window in reading_windows(header, rules.memory) {
         if progress.stopped() {
             return Err(Error::Stopped);
         }
@@ -149,6 +185,7 @@ pub struct Run<'a> {
     pub after: &'a Account,
     pub counts: Counts,
     pub near_gap: u64,
+    pub shifted: Shifted,
     pub costs: Costs,
     pub seconds: f64,
 }
@@ -157,9 +194,18 @@ impl Run<'_> {
     /// Writes it all down.
     pub fn ledger(&self) -> Ledger {
         let (rules, kernel) = (&self.job.rules, &self.job.rules.kernel);
-        let (before, after) = (self.before.total(), self.after.total());
+        let (before, after) = (self.before.sum(), self.after.sum());
+        let total_values = rules.values == Values::Total;
+        let s = &self.shifted;
+        // What comes out of totals: in the frame, beyond it, and what gaps swallowed, less what was filled in at them.
+        let mut beyond = Sum::default();
+        if total_values {
+            beyond.merge(&s.left_frame);
+            beyond.merge(&s.dropped);
+            beyond.add(-s.filled.value());
+        }
         let total = (self.to.grid.pixels() * self.to.bands) as u64;
-        let closure = closure(&before, &after);
+        let closure = closure(&before, &after, &beyond);
         let finite = |v: f64| v.is_finite().then_some(v);
         let entry = |path: &std::path::Path, header: &Header, sha256: &str| RasterEntry {
             path: path.to_owned(),
@@ -172,7 +218,7 @@ impl Run<'_> {
         };
         let area = {
             let j = self.job.back.jacobian(0.0, 0.0);
-            (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs()
+            if total_values { 1.0 } else { (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs() }
         };
         Ledger {
             regauge: env!("CARGO_PKG_VERSION").to_owned(),
@@ -185,8 +231,8 @@ impl Run<'_> {
                 order: kernel.order(),
                 poles: kernel.poles(),
             },
-            extension: rules.extension.to_string(),
-            values: "density".into(),
+            extension: rules.edges().to_string(),
+            values: rules.values.to_string(),
             reduce: reduce_name(self.plan, rules.reduce).into(),
             method: self.plan.method().into(),
             pixels: Pixels {
@@ -202,14 +248,16 @@ impl Run<'_> {
             flux: Flux {
                 before: finite(before.signal.value()),
                 after: finite(after.signal.value()),
-                left_frame: None,
+                left_frame: total_values.then(|| s.left_frame.value()),
+                filled_at_gaps: total_values.then(|| s.filled.value()),
+                lost_in_gaps: total_values.then(|| s.dropped.value()),
                 rounding: is_integer(self.to.sample_type).then_some(self.counts.rounding * area),
                 closure: closure.and_then(finite),
                 tolerance: rules.tolerance,
                 // A closure that cannot be had (no signal) has nothing to be off.
                 closed: rules.tolerance.map(|t| closure.is_none_or(|c| c.abs() <= t)),
             },
-            centroid: Centroid { before: before.centroid(), after: after.centroid() },
+            centroid: Centroid { before: self.before.centroid(), after: self.after.centroid() },
             displacement: Displacement {
                 rows: self.costs.displacement.0,
                 columns: self.costs.displacement.1,
@@ -257,7 +305,7 @@ fn is_integer(t: SampleType) -> bool {
 fn reduce_name(plan: &Plan, asked: Reduce) -> &'static str {
     use crate::resample::axis::Way;
     let widened = match plan {
-        Plan::Copy { .. } | Plan::Overlap { .. } => false,
+        Plan::Copy { .. } | Plan::Overlap { .. } | Plan::Shear(_) | Plan::Majority { .. } => false,
         Plan::RowsAndColumns { rows, columns, .. } => [rows, columns].iter().any(|a| {
             matches!(a.way, Way::Widen(_) | Way::WidenThenPrefilter(_) | Way::LeastSquares(_))
                 || matches!(a.way, Way::Fourier(s) if s > 1.0)

@@ -36,7 +36,13 @@ pub fn costs(
             };
             (line(source.0, stretch.0, way(stretch.0)), line(source.1, stretch.1, way(stretch.1)))
         }
-        Plan::Overlap { back } => {
+        Plan::Shear(_) => {
+            // Cells of the turned pixel's extent along each axis stand for the three passes together.
+            let j = back.jacobian(0.0, 0.0);
+            let cell = |n: usize, v: [f64; 2]| line(n, v[0].hypot(v[1]), Way::Conserve);
+            (cell(source.0, j[0]), cell(source.1, j[1]))
+        }
+        Plan::Overlap { back } | Plan::Majority { back } => {
             // A turned pixel's shadow on each axis, as a box of the same extent.
             let j = back.jacobian(target.0 as f64 / 2.0, target.1 as f64 / 2.0);
             let extent = |v: [f64; 2]| v[0].hypot(v[1]);
@@ -58,6 +64,8 @@ fn taps_of(axis: &Axis, kernel: &Kernel) -> usize {
         Way::Widen(a) | Way::WidenThenPrefilter(a) | Way::LeastSquares(a) | Way::Area(a) => {
             (2.0 * kernel.radius() * (a + 1.0)) as usize
         }
+        Way::Conserve if matches!(kernel.shape(), Shape::Sinc | Shape::Polynomial) => axis.source,
+        Way::Conserve => (2.0 * kernel.radius() + axis.step.abs()) as usize + 1,
         _ => kernel.taps().unwrap_or(1),
     }
 }
@@ -65,7 +73,7 @@ fn taps_of(axis: &Axis, kernel: &Kernel) -> usize {
 fn operator<'a>(axis: &Axis, rules: &'a Rules) -> AxisOperator<'a> {
     let kernel = &rules.kernel;
     let symbol = || kernel.is_prefiltered().then(|| kernel.symbol());
-    let weigher = Weigher::new(kernel, rules.extension, axis);
+    let weigher = Weigher::new(kernel, rules.edges(), axis);
     AxisOperator {
         weights: Box::new(move |x, out| weigher.weights(x, out)),
         before: axis.filters_input().then(symbol).flatten(),

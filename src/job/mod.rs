@@ -11,7 +11,7 @@ use crate::grid::Grid;
 use crate::map::Map;
 use crate::raster::{self, CELL, Digest, Header, MissingCodes, SampleType, Sink, Source, Window, check_free};
 use crate::report::Ledger;
-use crate::resample::{Counts, Engine, Outside, Plan, Rules};
+use crate::resample::{Counts, Engine, Extras, Outside, Plan, Rules, Shifted, Values};
 use account::{Account, inspect};
 use serde::{Deserialize, Serialize};
 use std::path::{Path, PathBuf};
@@ -130,7 +130,10 @@ impl Job {
         check_tables(from, &self.target, self.rules.memory)?;
         let size = (from.grid.rows, from.grid.columns);
         let plan = Plan::new(size, (self.target.rows, self.target.columns), &self.back, &self.rules)?;
-        let sample_type = self.rules.sample_type.unwrap_or(from.sample_type);
+        // Parts of counts are no whole numbers: totals become f64 unless asked.
+        let default_type =
+            if self.rules.values == Values::Total { SampleType::F64 } else { from.sample_type };
+        let sample_type = self.rules.sample_type.unwrap_or(default_type);
         let codes: Vec<f64> =
             from.missing.into_iter().chain(self.rules.missing).filter(|c| !c.is_nan()).collect();
         let fill = codes.iter().copied().find(|c| can_hold(sample_type, *c));
@@ -230,7 +233,7 @@ impl Ready<'_> {
         let looks_outside = self
             .plan
             .looks_outside((grid.rows, grid.columns), (self.header.grid.rows, self.header.grid.columns));
-        let open = self.job.rules.extension == crate::kernel::Extension::Open;
+        let open = self.job.rules.edges() == crate::kernel::Extension::Open;
         let why = if looks_outside && (self.job.rules.outside == Outside::Missing || open) {
             "some output pixels lie outside the input"
         } else if missing_in_input > 0 {
@@ -253,7 +256,7 @@ impl Ready<'_> {
     /// strip is no frame, and stays.)
     fn seen_frame(&self, onward: &Map, target: (usize, usize)) -> (Map, (usize, usize)) {
         let Plan::RowsAndColumns { rows, columns, .. } = &self.plan else { return (*onward, target) };
-        if self.job.rules.outside == Outside::Extend {
+        if self.job.rules.outside == Outside::Extend || self.job.rules.values == Values::Total {
             return (*onward, target);
         }
         let inside = |axis: &crate::resample::axis::Axis| {
@@ -283,7 +286,7 @@ impl Ready<'_> {
             ((from.grid.rows, from.grid.columns), (self.header.grid.rows, self.header.grid.columns));
         let onward = job.back.invert()?;
         let (into_seen, seen) = self.seen_frame(&onward, target);
-        let before = inspect(source, &into_seen, seen, &self.codes, job.rules.memory, progress)?;
+        let before = inspect(source, &into_seen, seen, &self.codes, &job.rules, progress)?;
         self.check_missing(before.account.missing())?;
         let engine = Engine {
             source,
@@ -293,14 +296,17 @@ impl Ready<'_> {
             codes: self.codes.clone(),
             sample_type: self.header.sample_type,
             fill: self.fill,
+            extras: Extras { signed_angles: before.account.has_negative(), ..Extras::default() },
         };
         let alignment = sink.as_ref().map_or(1, |s| s.alignment()).max(CELL);
         let mut digest = Digest::new(&self.header);
-        let mut after = Account::new(&job.back, target, size, self.header.bands);
+        let total_values = job.rules.values == Values::Total;
+        let mut after = Account::new(&job.back, target, size, self.header.bands, total_values);
         let out_codes = MissingCodes { codes: self.fill.into_iter().collect() };
         let (mut counts, mut near_gap, mut done) = (Counts::default(), 0, from.grid.pixels() as u64);
+        let mut shifted = Shifted::default();
         let total = done + self.header.grid.pixels() as u64;
-        engine.run(alignment, None, &mut |block| {
+        let outside = engine.run(alignment, None, &mut |block| {
             if progress.stopped() {
                 return Err(Error::Stopped);
             }
@@ -308,6 +314,7 @@ impl Ready<'_> {
             after.add(&block.window, &block.samples, &out_codes, Some(&before.account));
             counts.add(&block.counts);
             near_gap += block.near_gap;
+            shifted.merge(&block.shifted);
             if let Some(sink) = &mut sink {
                 sink.write(&block.window, &block.samples)?;
             }
@@ -315,6 +322,7 @@ impl Ready<'_> {
             progress.advance(done, total);
             Ok(())
         })?;
+        shifted.merge(&outside);
         if progress.stopped() {
             return Err(Error::Stopped);
         }
@@ -334,6 +342,7 @@ impl Ready<'_> {
             after: &after,
             counts,
             near_gap,
+            shifted,
             costs,
             seconds: started.elapsed().as_secs_f64(),
         };

@@ -47,6 +47,12 @@ impl Frame {
         Frame { map: *map, other: (other.0 as f64, other.1 as f64), shares, half }
     }
 
+    /// Every pixel of a raster of `own` counts whole.
+    pub fn whole(own: (usize, usize)) -> Self {
+        let size = (own.0 as f64, own.1 as f64);
+        Frame { map: Map::IDENTITY, other: size, shares: None, half: (0.0, 0.0) }
+    }
+
     /// The fraction of the pixel's area that lies inside the other frame.
     pub fn share(&self, row: usize, column: usize) -> f64 {
         if let Some((rows, columns)) = &self.shares {
@@ -87,6 +93,9 @@ impl Frame {
 
     /// The shares of a stretch of one row; `None` where all are 1.
     fn row_shares(&self, row: usize, columns: &Range<usize>, out: &mut Vec<f64>) -> bool {
+        if self.map == Map::IDENTITY && self.half == (0.0, 0.0) {
+            return false;
+        }
         if let Some((r, c)) = &self.shares
             && r[row] == 1.0
             && c[columns.clone()].iter().all(|s| *s == 1.0)
@@ -134,11 +143,13 @@ impl Default for Balance {
 
 impl Balance {
     /// Adds a stretch of one row; NaN is missing. `back` takes this raster's positions to input positions (the identity
-    /// for the input itself) and, by its Jacobian, tells the pixel's area there.
+    /// for the input itself) and, by its Jacobian, tells the pixel's area there; totals are not multiplied by it.
+    #[allow(clippy::too_many_arguments)]
     pub fn add_row(
         &mut self,
         frame: &Frame,
         back: &Map,
+        by_area: bool,
         row: usize,
         columns: &Range<usize>,
         values: &[f64],
@@ -147,11 +158,11 @@ impl Balance {
         let partial = frame.row_shares(row, columns, shares);
         let shares = partial.then_some(&shares[..]);
         if !back.is_affine() {
-            return self.add_local(back, row, columns, values, shares);
+            return self.add_local(back, by_area, row, columns, values, shares);
         }
         // Row and column in the input are affine in the column: moments need only the sum of signal times column.
         let m = &back.matrix;
-        let area = (m[0][0] * m[1][1] - m[0][1] * m[1][0]).abs();
+        let area = if by_area { (m[0][0] * m[1][1] - m[0][1] * m[1][0]).abs() } else { 1.0 };
         let mut totals = Totals::default();
         const PART: usize = 32 * LANES;
         for (p, part) in values.chunks(PART).enumerate() {
@@ -176,6 +187,7 @@ impl Balance {
     fn add_local(
         &mut self,
         back: &Map,
+        by_area: bool,
         row: usize,
         columns: &Range<usize>,
         values: &[f64],
@@ -188,7 +200,8 @@ impl Balance {
             }
             let (r, c) = (row as f64, (columns.start + i) as f64);
             let j = back.jacobian(r, c);
-            let s = v * shares.map_or(1.0, |s| s[i]) * (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs();
+            let area = if by_area { (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs() } else { 1.0 };
+            let s = v * shares.map_or(1.0, |s| s[i]) * area;
             let (x, y) = back.apply(r, c);
             self.valid += 1;
             self.range = (self.range.0.min(*v), self.range.1.max(*v));
@@ -291,8 +304,11 @@ impl Totals {
     }
 }
 
-/// (after - before) / sum of |before|; `None` if that is 0.
-pub fn closure(before: &Balance, after: &Balance) -> Option<f64> {
+/// (after + beyond - before) / sum of |before|, with what is accounted for `beyond` the output; `None` if that is 0.
+pub fn closure(before: &Balance, after: &Balance, beyond: &Sum) -> Option<f64> {
     let scale = before.modulus.value();
-    (scale > 0.0 && scale.is_finite()).then(|| (after.signal.value() - before.signal.value()) / scale)
+    let mut change = after.signal;
+    change.merge(beyond);
+    change.add(-before.signal.value());
+    (scale > 0.0 && scale.is_finite()).then(|| change.value() / scale)
 }

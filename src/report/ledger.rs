@@ -22,11 +22,11 @@ pub struct Ledger {
     pub kernel: KernelEntry,
     /// What stood beyond the edges.
     pub extension: String,
-    /// What a number is: `density`.
+    /// What a number is: `density`, `total`, `label` or `cyclic:PERIOD`.
     pub values: String,
     /// What was done against aliasing: `none`, `widen` or `least-squares`.
     pub reduce: String,
-    /// The pass: `copy`, `rows-and-columns`, `gather` or `overlap`.
+    /// The pass: `copy`, `rows-and-columns`, `gather`, `overlap`, `shear` or `majority`.
     pub method: String,
     /// Counts of output samples, over all bands.
     pub pixels: Pixels,
@@ -102,7 +102,7 @@ pub struct Pixels {
     pub moved_off_code: u64,
 }
 
-/// Signal x area in input pixels, over the region that both grids cover.
+/// Signal x area in input pixels, over the region that both grids cover; of totals their sum, wherever they lie.
 #[derive(Clone, Debug, Default, PartialEq, Serialize, Deserialize)]
 pub struct Flux {
     /// Before.
@@ -111,9 +111,16 @@ pub struct Flux {
     pub after: Option<f64>,
     /// What left the frame; null for `density`.
     pub left_frame: Option<f64>,
+    /// What pixels of totals near gaps were given for the part of them that is missing; null for `density`.
+    #[serde(default)]
+    pub filled_at_gaps: Option<f64>,
+    /// What fell into pixels of totals that are missing; null for `density`.
+    #[serde(default)]
+    pub lost_in_gaps: Option<f64>,
     /// Sum of (stored - computed) x pixel area: the bias that rounding and saturation made.
     pub rounding: Option<f64>,
-    /// (after - before) / sum of |before|; null if that is 0.
+    /// (after - before) / sum of |before|; null if that is 0. Of totals, after counts what left the frame and what gaps
+    /// swallowed, but not what was filled in at them.
     pub closure: Option<f64>,
     /// The bound asked for.
     pub tolerance: Option<f64>,

@@ -28,6 +28,8 @@ pub enum Way {
     Coefficients,
     /// The coefficients of the least-squares spline of this pitch, for the gather pass.
     LeastSquaresCoefficients(f64),
+    /// Prefilter, then weights that keep totals.
+    Conserve,
 }
 
 /// One axis: `target` samples from a line of `source` samples; output sample o looks at `o * step + offset`.
@@ -63,6 +65,14 @@ impl Axis {
         output as f64 * self.step + self.offset
     }
 
+    /// The edges of output cell `output` on the input's line, measured from its outer edge and clamped to it. Neighbours
+    /// share their edge to the bit.
+    pub fn cell(&self, output: i64) -> (f64, f64) {
+        let edge = |o: i64| ((o as f64 - 0.5) * self.step + self.offset + 0.5).clamp(0.0, self.source as f64);
+        let (a, b) = (edge(output), edge(output + 1));
+        (a.min(b), a.max(b))
+    }
+
     /// Whether an output sample's centre lies within the input's edges, which belong to it.
     pub fn is_inside(&self, output: i64) -> bool {
         is_inside(self.position(output), self.source)
@@ -72,7 +82,11 @@ impl Axis {
     pub fn filters_input(&self) -> bool {
         matches!(
             self.way,
-            Way::Interpolate | Way::LeastSquares(_) | Way::Coefficients | Way::LeastSquaresCoefficients(_)
+            Way::Interpolate
+                | Way::LeastSquares(_)
+                | Way::Coefficients
+                | Way::LeastSquaresCoefficients(_)
+                | Way::Conserve
         )
     }
 
@@ -105,23 +119,30 @@ impl Axis {
         let taps = match self.way {
             Way::Coefficients => outputs.clone(),
             Way::Fourier(_) | Way::Polynomial => 0..n,
+            Way::Conserve if is_whole_line(kernel) => 0..n,
             _ => {
                 let radius = match self.way {
                     Way::Copy => 0.0,
                     Way::Widen(a) | Way::WidenThenPrefilter(a) => kernel.radius() * a,
                     Way::LeastSquares(a) | Way::LeastSquaresCoefficients(a) => (1.0 + a) * kernel.radius(),
                     Way::Area(a) => 0.5 * a + 0.5,
+                    Way::Conserve => kernel.radius().max(1.0) + 0.5 * self.step.abs() + 1.0,
                     _ => kernel.radius(),
                 };
                 let (a, b) =
                     (self.position(outputs.start), self.position((outputs.end - 1).max(outputs.start)));
-                let (low, high) = (a.min(b) - radius, a.max(b) + radius);
+                let (mut a, mut b) = (a.min(b), a.max(b));
+                if self.way == Way::Conserve {
+                    // Nothing lies beyond the line's ends.
+                    (a, b) = (a.clamp(-1.0, n as f64), b.clamp(-1.0, n as f64));
+                }
+                let (low, high) = (a - radius, b + radius);
                 // One more on either side for rounding: unused samples cost a little, missing ones would be wrong.
                 clamp_index(low.floor() - 1.0)..clamp_index(high.ceil() + 2.0)
             }
         };
         let taps = if open { taps.start.clamp(0, n)..taps.end.clamp(0, n) } else { taps };
-        let samples = if self.filters_input() && !taps.is_empty() {
+        let samples = if self.filters_input() && kernel.is_prefiltered() && !taps.is_empty() {
             hull(segments(self.source, taps.clone()).iter().map(|s| segment_window(s, self.source, open)))
         } else {
             taps.clone()
@@ -184,6 +205,10 @@ pub fn choose_way(kernel: &Kernel, step: f64, offset: f64, stretch: f64, least_s
         _ if kernel.is_prefiltered() => Way::Interpolate,
         _ => Way::Taps,
     }
+}
+
+fn is_whole_line(kernel: &Kernel) -> bool {
+    matches!(kernel.shape(), Shape::Sinc | Shape::Polynomial)
 }
 
 fn hull(ranges: impl Iterator<Item = Range<i64>>) -> Range<i64> {

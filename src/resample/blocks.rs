@@ -3,15 +3,20 @@
 //! Inside a block, rows and strips are shared among threads. Nothing in a sample's value depends on how the output is cut.
 
 use super::axis::{Axis, Way};
-use super::convert::Counts;
+use super::convert::{Counts, convert};
 use super::copy::copy;
-use super::passes::Passes;
+use super::passes::{Passes, Prepared, Span, nothing};
 use super::plan::{Plan, Size};
+use super::rows_and_columns::Plane;
 use super::rules::{Outside, Rules};
+use super::settle::{Resampled, Settled, Shifted, settle};
+use super::values::Values;
 use crate::error::{Error, Result};
 use crate::kernel::SEGMENT;
 use crate::raster::{MissingCodes, Sample, SampleType, Samples, Source, Window};
+use crate::real::Real;
 use crate::with_samples;
+use ndarray::Array2;
 use rayon::prelude::*;
 use std::ops::Range;
 
@@ -31,6 +36,18 @@ pub struct Engine<'a> {
     pub sample_type: SampleType,
     /// Code for missing in the output; NaN if `None`.
     pub fill: Option<f64>,
+    /// What is wanted beside the values.
+    pub extras: Extras,
+}
+
+/// What is wanted of an engine beside the values.
+#[derive(Clone, Debug, Default)]
+pub struct Extras {
+    /// The share of each pixel's weights that found samples.
+    pub coverage: bool,
+    /// Angles are told from minus half a period to half a period, as in a source that has negative ones; else from 0 to the
+    /// period.
+    pub signed_angles: bool,
 }
 
 /// One finished block.
@@ -43,6 +60,10 @@ pub struct Block {
     pub counts: Counts,
     /// Outputs that lean on missing samples by more than 1e-3 of their weight.
     pub near_gap: u64,
+    /// What happened to totals at gaps.
+    pub shifted: Shifted,
+    /// The share of each pixel's weights that found samples, band by band, if wanted.
+    pub coverage: Option<Vec<f32>>,
 }
 
 impl Engine<'_> {
@@ -52,7 +73,7 @@ impl Engine<'_> {
         (grid.rows, grid.columns)
     }
 
-    /// Runs all blocks in order. `alignment` is what the sink asks of windows; `side` fixes the side of blocks (for tests
+    /// Runs all blocks in order. Of totals, what falls outside the frame is added up afterwards and returned. `alignment` is what the sink asks of windows; `side` fixes the side of blocks (for tests
     /// of the promise that it does not matter), otherwise they follow the memory.
     ///
     /// # Errors
@@ -62,7 +83,7 @@ impl Engine<'_> {
         alignment: usize,
         side: Option<usize>,
         take: &mut dyn FnMut(Block) -> Result<()>,
-    ) -> Result<()> {
+    ) -> Result<Shifted> {
         let (height, width) = match side {
             Some(s) => (s, s),
             None => self.block_size(alignment)?,
@@ -78,15 +99,114 @@ impl Engine<'_> {
                     (Plan::Copy { swapped, rows: a, columns: b }, _, _) if self.copies_bits() => {
                         self.copied(*swapped, (*a, *b), &rows, &columns)?
                     }
-                    (_, Some(p), _) => p.block(self, &rows, &columns)?,
-                    (_, _, Some(p)) => p.block(self, &rows, &columns)?,
+                    (_, Some(p), _) => self.block(p, &rows, &columns)?,
+                    (_, _, Some(p)) => self.block(p, &rows, &columns)?,
                     // One of the two was made above.
                     (_, None, None) => continue,
                 };
                 take(block)?;
             }
         }
-        Ok(())
+        match &passes64 {
+            Some(passes) => self.outside(passes, height, width),
+            None => Ok(Shifted::default()),
+        }
+    }
+
+    /// Adds up what a raster of totals leaves beyond the frame: the same cells as within, one by one.
+    fn outside(&self, passes: &Passes<f64>, height: usize, width: usize) -> Result<Shifted> {
+        let mut all = Shifted::default();
+        let Some((rows, columns)) = self.plan.touched(self.source_size(), self.rules) else { return Ok(all) };
+        let (h, w) = (self.target.0 as i64, self.target.1 as i64);
+        let (top, bottom) = (rows.start.min(0)..rows.end.min(0), rows.start.max(h)..rows.end.max(h));
+        let middle = rows.start.clamp(0, h)..rows.end.clamp(0, h);
+        let (left, right) =
+            (columns.start.min(0)..columns.end.min(0), columns.start.max(w)..columns.end.max(w));
+        let parts =
+            [(top, columns.clone()), (bottom, columns.clone()), (middle.clone(), left), (middle, right)];
+        for (rows, columns) in parts {
+            for r in rows.clone().step_by(height) {
+                for c in columns.clone().step_by(width) {
+                    let span = Span {
+                        rows: r..(r + height as i64).min(rows.end),
+                        columns: c..(c + width as i64).min(columns.end),
+                    };
+                    let Some(prepared) = passes.prepare(self, &span)? else { continue };
+                    for band in 0..self.source.header().bands {
+                        let mut settled = self.settled(&prepared, band);
+                        // What is missing there was dropped there.
+                        settled
+                            .values
+                            .iter()
+                            .filter(|v| !v.is_nan())
+                            .for_each(|v| settled.shifted.left_frame.add(*v));
+                        all.merge(&settled.shifted);
+                    }
+                }
+            }
+        }
+        Ok(all)
+    }
+
+    /// Resamples one block of the output.
+    fn block<T: Real>(
+        &self,
+        passes: &Passes<T>,
+        rows: &Range<usize>,
+        columns: &Range<usize>,
+    ) -> Result<Block> {
+        let signed = |r: &Range<usize>| r.start as i64..r.end as i64;
+        let span = Span { rows: signed(rows), columns: signed(columns) };
+        let prepared = passes.prepare(self, &span)?;
+        let mut block = Block {
+            window: Window { rows: rows.clone(), columns: columns.clone() },
+            samples: Samples::zeros(self.sample_type, 0),
+            counts: Counts::default(),
+            near_gap: 0,
+            shifted: Shifted::default(),
+            coverage: self.extras.coverage.then(Vec::new),
+        };
+        for band in 0..self.source.header().bands {
+            let settled = match &prepared {
+                Some(prepared) => self.settled(prepared, band),
+                None => Settled::of_nothing(nothing(self, &span)),
+            };
+            block.near_gap += settled.near_gap;
+            block.shifted.merge(&settled.shifted);
+            if let Some(coverage) = &mut block.coverage {
+                coverage.extend(settled.coverage());
+            }
+            let (converted, counts) = convert(settled.values.view(), self.sample_type, self.fill);
+            block.counts.add(&counts);
+            block.samples.append(converted)?;
+        }
+        Ok(block)
+    }
+
+    /// The settled values of a band.
+    fn settled<T: Real>(&self, prepared: &Prepared<T>, band: usize) -> Settled<T> {
+        let least = self.rules.min_coverage;
+        let Values::Cyclic(period) = self.rules.values else {
+            return settle(prepared.resampled(band, Plane::Values), least);
+        };
+        if matches!(self.plan, Plan::Copy { .. }) {
+            return settle(prepared.resampled(band, Plane::Values), least);
+        }
+        let Resampled { values: cosine, mask } = prepared.resampled(band, Plane::Cosine(period));
+        let sine = prepared.resampled(band, Plane::Sine(period)).values;
+        // Both go through the same weights; a gap's share divides out of the angle but not out of the resultant.
+        let low = if self.extras.signed_angles { -0.5 * period } else { 0.0 };
+        let of_unit = settle(Resampled { values: length(&cosine, &sine), mask }, least);
+        let mut values = of_unit.values;
+        ndarray::Zip::from(&mut values).and(&cosine).and(&sine).for_each(|v, c, s| {
+            let resultant = v.to_f64();
+            *v = T::from_f64(if resultant < LEAST_RESULTANT || resultant.is_nan() {
+                f64::NAN
+            } else {
+                angle(c.to_f64(), s.to_f64(), period, low)
+            });
+        });
+        Settled { values, ..of_unit }
     }
 
     /// Whether the passes compute in f64.
@@ -107,11 +227,14 @@ impl Engine<'_> {
     ) -> Result<Block> {
         let samples = copy(self.source, swapped, axes, (rows, columns), &self.codes, self.fill)?;
         let missing = count_missing(&samples, self.fill);
+        let coverage = self.extras.coverage.then(|| there(&samples, self.fill));
         Ok(Block {
             window: Window { rows: rows.clone(), columns: columns.clone() },
             samples,
             counts: Counts { missing, ..Counts::default() },
             near_gap: 0,
+            shifted: Shifted::default(),
+            coverage,
         })
     }
 
@@ -137,7 +260,7 @@ impl Engine<'_> {
                 return Ok((height, width));
             }
             // Whole rows are cheap to read and to write; squares are what a turned map wants.
-            let turned = matches!(self.plan, Plan::Gather { .. } | Plan::Overlap { .. });
+            let turned = !matches!(self.plan, Plan::Copy { .. } | Plan::RowsAndColumns { .. });
             let least = if turned { align } else { align.max(SEGMENT) };
             if height > least && (!turned || height >= width) {
                 height = halve(height);
@@ -160,7 +283,7 @@ impl Engine<'_> {
     fn block_bytes(&self, height: usize, width: usize) -> usize {
         let (height, width) = (height.min(self.target.0), width.min(self.target.1));
         let header = self.source.header();
-        let (kernel, extension) = (&self.rules.kernel, self.rules.extension);
+        let (kernel, extension) = (&self.rules.kernel, self.rules.edges());
         let real = if self.computes_in_f64() { 8 } else { 4 };
         let stored = header.sample_type.bytes() * header.bands;
         // Values, and the mask's three responses where samples can be missing.
@@ -179,7 +302,19 @@ impl Engine<'_> {
                 let (c, c_out) = columns.most_needed(kernel, extension, width);
                 (r, c, r.saturating_mul(width) + threads() * 192 * (r + r_out) + threads() * 32 * (c + c_out))
             }
-            Plan::Gather { back, .. } | Plan::Overlap { back } => {
+            Plan::Shear(shears) => {
+                // Blocks at the corners and in the middle stand for all.
+                let ends =
+                    |n: usize, len: usize| [0, (n - len) / 2, n - len].map(|s| s as i64..(s + len) as i64);
+                let mut most = 0;
+                for r in ends(self.target.0, height) {
+                    for c in ends(self.target.1, width) {
+                        most = most.max(shears.block_numbers(kernel, &r, &c));
+                    }
+                }
+                return most.saturating_mul(8 + stored).saturating_add(out);
+            }
+            Plan::Gather { back, .. } | Plan::Overlap { back } | Plan::Majority { back } => {
                 let (h, w) = (self.target.0 as f64 - 1.0, self.target.1 as f64 - 1.0);
                 let corners = [(0.0, 0.0), (0.0, w), (h, 0.0), (h, w)];
                 let (mut r, mut c) = (0.0f64, 0.0f64);
@@ -244,6 +379,34 @@ impl Engine<'_> {
 
 fn threads() -> usize {
     rayon::current_num_threads()
+}
+
+/// The least length of the mean of unit vectors that still has a direction.
+const LEAST_RESULTANT: f64 = 0.1;
+
+fn length<T: Real>(cosine: &Array2<T>, sine: &Array2<T>) -> Array2<T> {
+    let mut out = cosine.clone();
+    out.zip_mut_with(sine, |c, s| *c = T::from_f64(c.to_f64().hypot(s.to_f64())));
+    out
+}
+
+/// The angle of a vector, from `low` to a period above it.
+fn angle(cosine: f64, sine: f64, period: f64, low: f64) -> f64 {
+    let turn = sine.atan2(cosine) / (2.0 * std::f64::consts::PI) * period;
+    // An angle a rounding below `low` is `low`.
+    let slack = 1e-12 * period;
+    let above = (turn - low).rem_euclid(period);
+    low + if period - above < slack { 0.0 } else { above }
+}
+
+/// 1 where a sample is there.
+fn there(samples: &Samples, fill: Option<f64>) -> Vec<f32> {
+    fn mark<S: Sample>(v: &[S], codes: &MissingCodes) -> Vec<f32> {
+        let codes = codes.of::<S>();
+        v.iter().map(|v| if v.is_nan() || codes.iter().any(|c| v.is(*c)) { 0.0 } else { 1.0 }).collect()
+    }
+    let codes = MissingCodes { codes: fill.into_iter().collect() };
+    with_samples!(samples, v => mark(v, &codes))
 }
 
 fn count_missing(samples: &Samples, fill: Option<f64>) -> u64 {

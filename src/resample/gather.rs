@@ -1,6 +1,7 @@
 //! The pass for turned and projective maps: the tensor product of both axes' weights at every position.
 
 use super::axis::is_inside;
+use super::passes::Span;
 use super::rules::Outside;
 use super::weights::Weigher;
 use crate::map::Map;
@@ -8,7 +9,6 @@ use crate::real::Real;
 use crate::simd;
 use ndarray::Array2;
 use ndarray::parallel::prelude::*;
-use std::ops::Range;
 
 /// How a gather looks at each position.
 #[derive(Clone, Debug)]
@@ -29,7 +29,7 @@ pub struct Look {
 }
 
 /// A plane of samples or coefficients over extended indices.
-pub struct Plane<'a, T> {
+pub struct Nodes<'a, T> {
     /// Rows x columns.
     pub values: &'a Array2<T>,
     /// Extended index of the first row and column.
@@ -58,20 +58,14 @@ pub fn stretch_at(back: &Map, row: f64, column: f64) -> (f64, f64) {
 
 /// Evaluates the block of outputs `rows` x `columns`; NaN where there is nothing: outside, or out of an open raster's
 /// reach.
-pub fn gather<T: Real>(
-    look: &Look,
-    plane: &Plane<T>,
-    by: By,
-    rows: &Range<usize>,
-    columns: &Range<usize>,
-) -> Array2<T> {
-    let mut out = Array2::<T>::from_elem((rows.len(), columns.len()), T::from_f64(f64::NAN));
+pub(super) fn gather<T: Real>(look: &Look, plane: &Nodes<T>, by: By, span: &Span) -> Array2<T> {
+    let mut out = Array2::<T>::from_elem(span.size(), T::from_f64(f64::NAN));
     out.axis_chunks_iter_mut(ndarray::Axis(0), 4).into_par_iter().enumerate().for_each_init(
         || Local::new(look),
         |local, (group, mut lines)| {
             for (j, mut line) in lines.rows_mut().into_iter().enumerate() {
-                let r = (rows.start + 4 * group + j) as f64;
-                for (v, c) in line.iter_mut().zip(columns.clone()) {
+                let r = (span.rows.start + (4 * group + j) as i64) as f64;
+                for (v, c) in line.iter_mut().zip(span.columns.clone()) {
                     local.pixel(look, plane, by, r, c as f64, v);
                 }
             }
@@ -98,7 +92,7 @@ impl<T: Real> Local<T> {
         }
     }
 
-    fn pixel(&mut self, look: &Look, plane: &Plane<T>, by: By, row: f64, column: f64, out: &mut T) {
+    fn pixel(&mut self, look: &Look, plane: &Nodes<T>, by: By, row: f64, column: f64, out: &mut T) {
         let (x, y) = look.back.apply(row, column);
         if !(x.abs() < 1e15 && y.abs() < 1e15) {
             return;

@@ -3,20 +3,25 @@
 pub mod axis;
 pub mod blocks;
 mod chain;
+mod conserve;
 mod convert;
 mod copy;
 mod fourier;
 mod gather;
 mod least_squares;
+mod majority;
 mod overlap;
 mod passes;
 mod patch;
 mod plan;
 mod rows_and_columns;
 mod rules;
+mod settle;
+mod shear;
+mod values;
 pub mod weights;
 
-pub use blocks::{Block, Engine};
+pub use blocks::{Block, Engine, Extras};
 pub use convert::Counts;
 pub use plan::{Plan, Size};
 
@@ -25,3 +30,5 @@ pub fn gram_symbol(kernel: &crate::kernel::Kernel) -> Vec<f64> {
     least_squares::Projection::gram_symbol(kernel)
 }
 pub use rules::{Outside, Reduce, Rules};
+pub use settle::Shifted;
+pub use values::{Limit, Values};

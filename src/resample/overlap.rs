@@ -2,33 +2,42 @@
 //!
 //! The image is clipped against the rows and then the columns of the input's cells.
 
-use super::gather::Plane;
+use super::gather::Nodes;
+use super::passes::Span;
 use crate::map::Map;
 use crate::map::polygon::{area as polygon_area, clip};
 use crate::real::Real;
 use ndarray::Array2;
 use ndarray::parallel::prelude::*;
-use std::ops::Range;
 
 /// Which cells count: of a raster of this size, those inside; `None`: all that the plane holds.
 pub type Limits = Option<(usize, usize)>;
 
-/// The mean over each output pixel's image; NaN where `keep` says that there is nothing, or the image covers no cell.
-pub fn overlap<T: Real>(
+/// What is given of an output pixel's image.
+#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+pub enum Give {
+    /// The mean of the samples by area.
+    Mean,
+    /// The sum of the samples, each with the share of it that the image covers.
+    Sum,
+}
+
+/// What each output pixel's image holds; NaN where `keep` says that there is nothing, or the image covers no cell.
+pub(super) fn overlap<T: Real>(
     back: &Map,
-    plane: &Plane<T>,
+    plane: &Nodes<T>,
     limits: Limits,
-    rows: &Range<usize>,
-    columns: &Range<usize>,
+    span: &Span,
+    give: Give,
     keep: impl Fn(f64, f64) -> bool + Sync,
 ) -> Array2<T> {
-    let mut out = Array2::<T>::from_elem((rows.len(), columns.len()), T::from_f64(f64::NAN));
+    let mut out = Array2::<T>::from_elem(span.size(), T::from_f64(f64::NAN));
     out.axis_chunks_iter_mut(ndarray::Axis(0), 4).into_par_iter().enumerate().for_each_init(
         || (Vec::new(), Clip::default()),
         |(cells, clip), (group, mut lines)| {
             for (j, mut line) in lines.rows_mut().into_iter().enumerate() {
-                let r = (rows.start + 4 * group + j) as f64;
-                for (v, c) in line.iter_mut().zip(columns.clone()) {
+                let r = (span.rows.start + (4 * group + j) as i64) as f64;
+                for (v, c) in line.iter_mut().zip(span.columns.clone()) {
                     let c = c as f64;
                     if !keep(r, c) {
                         continue;
@@ -43,7 +52,7 @@ pub fn overlap<T: Real>(
                         }
                     }
                     if area > 0.0 {
-                        *v = T::from_f64(sum / area);
+                        *v = T::from_f64(if give == Give::Mean { sum / area } else { sum });
                     }
                 }
             }

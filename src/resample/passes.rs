@@ -1,30 +1,33 @@
-//! The passes of one plan, prepared once and carried out block by block; and what is missing afterwards.
+//! The passes of one plan, prepared once, and what they make of one block.
 
 use super::axis::{Axis, Way, is_inside};
-use super::blocks::{Block, Engine};
+use super::blocks::Engine;
 use super::chain::{Chain, Part, Stretch};
-use super::convert::{Counts, convert};
-use super::gather::{By, Look, Plane, gather};
-use super::overlap::overlap;
+use super::gather::{By, Look, Nodes, gather};
+use super::majority::majority;
+use super::overlap::{Give, overlap};
 use super::patch::Patch;
 use super::plan::Plan;
-use super::rows_and_columns as passes;
+use super::rows_and_columns::{Plane, resample};
 use super::rules::Outside;
+use super::settle::{Mask, Resampled};
+use super::shear::Shears;
+use super::values::Values;
 use super::weights::Weigher;
-use crate::error::{Error, Result};
-use crate::kernel::Extension;
+use crate::error::Result;
+use crate::kernel::{Extension, Prefilter};
 use crate::map::Map;
-use crate::raster::{Samples, Window};
 use crate::real::Real;
 use ndarray::Array2;
-use rayon::prelude::*;
 use std::ops::Range;
 
 /// The passes of one plan in one precision, prepared once.
 pub(super) enum Passes<T> {
     Axes { swapped: bool, rows: Chain<T>, columns: Chain<T> },
     Gather { rows: Chain<T>, columns: Chain<T>, look: Box<Look>, lattice: Lattice },
-    Overlap { rows: Chain<T>, columns: Chain<T> },
+    Overlap { rows: Chain<T>, columns: Chain<T>, back: Map },
+    Majority { rows: Chain<T>, columns: Chain<T>, back: Map },
+    Shear { shears: Box<Shears>, prefilter: Option<Prefilter<f64>> },
 }
 
 /// Where the gathered plane's nodes lie: input position = node * step + offset, for rows and columns.
@@ -34,26 +37,34 @@ pub(super) struct Lattice {
     columns: (f64, f64),
 }
 
-/// The four planes of a masked resampling, or the values alone.
-struct Resampled<T> {
-    values: Array2<T>,
-    mask: Option<Mask<T>>,
+/// A block of outputs, which may lie beyond the frame.
+#[derive(Clone, Debug)]
+pub(super) struct Span {
+    pub rows: Range<i64>,
+    pub columns: Range<i64>,
 }
 
-/// The responses to the mask.
-struct Mask<T> {
-    /// Of the whole chain.
-    whole: Array2<T>,
-    /// Of the kernel's own taps.
-    taps: Option<Array2<T>>,
-    /// Of the moduli of its taps, where some are negative.
-    moduli: Option<Array2<T>>,
+impl Span {
+    pub fn size(&self) -> (usize, usize) {
+        ((self.rows.end - self.rows.start) as usize, (self.columns.end - self.columns.start) as usize)
+    }
+}
+
+/// A block with all that was read for it.
+pub(super) struct Prepared<'a, T> {
+    passes: &'a Passes<T>,
+    engine: &'a Engine<'a>,
+    span: Span,
+    patch: Patch,
+    stretches: Option<(Stretch<T>, Stretch<T>)>,
+    /// Extended index of the patch's first row and column.
+    origin: (i64, i64),
 }
 
 impl<T: Real> Passes<T> {
     /// Prepares the engine's plan.
     pub fn new(engine: &Engine) -> Self {
-        let (kernel, extension) = (&engine.rules.kernel, engine.rules.extension);
+        let (kernel, extension) = (&engine.rules.kernel, engine.rules.edges());
         let (r, c) = engine.gather_axes();
         let chain = |axis: Axis| Chain::new(axis, kernel, extension);
         match &engine.plan {
@@ -99,111 +110,71 @@ impl<T: Real> Passes<T> {
                 let lattice = Lattice { rows: (r.step, r.offset), columns: (c.step, c.offset) };
                 Passes::Gather { rows: chain(r), columns: chain(c), look, lattice }
             }
-            Plan::Overlap { .. } => Passes::Overlap { rows: chain(r), columns: chain(c) },
+            Plan::Overlap { back } => Passes::Overlap { rows: chain(r), columns: chain(c), back: *back },
+            Plan::Majority { back } => Passes::Majority { rows: chain(r), columns: chain(c), back: *back },
+            Plan::Shear(shears) => Passes::Shear {
+                shears: shears.clone(),
+                prefilter: kernel.is_prefiltered().then(|| Prefilter::for_segments(&kernel.symbol())),
+            },
         }
     }
 
-    /// Resamples one block of the output.
+    /// Reads what a block of outputs needs; `None` if it sees nothing.
     ///
     /// # Errors
     /// When the source cannot be read.
-    pub fn block(&self, engine: &Engine, rows: &Range<usize>, columns: &Range<usize>) -> Result<Block> {
-        let bands = engine.source.header().bands;
-        let mut samples: Option<Samples> = None;
-        let mut counts = Counts::default();
-        let mut near_gap = 0;
-        let mut each = |resampled: Resampled<T>| -> Result<()> {
-            let (plane, near) = settle(resampled, engine.rules.min_coverage);
-            near_gap += near;
-            let (converted, c) = convert(plane.view(), engine.sample_type, engine.fill);
-            counts.add(&c);
-            match &mut samples {
-                Some(all) => all.append(converted)?,
-                None => samples = Some(converted),
-            }
-            Ok(())
-        };
-        match self {
-            Passes::Axes { swapped, rows: r, columns: c } => {
-                let (sr, sc) = (r.stretch(signed(rows)), c.stretch(signed(columns)));
-                let patch = self.patch(engine, &sr.reach.samples, &sc.reach.samples, *swapped)?;
-                for band in 0..bands {
-                    let mut resampled = resample_axes(&patch, band, (r, &sr), (c, &sc));
-                    blank(engine, &mut resampled.values, (r, &sr), (c, &sc));
-                    each(resampled)?;
-                }
-            }
-            Passes::Gather { rows: r, columns: c, look, lattice } => {
+    pub fn prepare<'a>(&'a self, engine: &'a Engine<'a>, span: &Span) -> Result<Option<Prepared<'a, T>>> {
+        let total = engine.rules.values == Values::Total;
+        let (nodes, swapped) = match self {
+            Passes::Axes { swapped, .. } => (Some((span.rows.clone(), span.columns.clone())), *swapped),
+            Passes::Gather { look, lattice, .. } => {
                 let radius = (look.weighers.0.radius(), look.weighers.1.radius());
                 let whole = (look.weighers.0.is_whole_line(), look.weighers.1.is_whole_line());
-                let Some((nr, nc)) = nodes(engine, &look.back, rows, columns, radius, whole, Some(*lattice))
+                (nodes(engine, &look.back, span, radius, whole, Some(*lattice)), false)
+            }
+            Passes::Overlap { back, .. } | Passes::Majority { back, .. } if total => {
+                (touched_nodes(engine, back, span), false)
+            }
+            Passes::Overlap { back, .. } | Passes::Majority { back, .. } => {
+                (nodes(engine, back, span, widest_image(back, span), (false, false), None), false)
+            }
+            Passes::Shear { shears, .. } => {
+                let Some((rows, columns)) = shears.window(&engine.rules.kernel, &span.rows, &span.columns)
                 else {
-                    for _ in 0..bands {
-                        each(Resampled { values: nothing(rows, columns), mask: None })?;
-                    }
-                    return finish(rows, columns, samples, counts, near_gap);
+                    return Ok(None);
                 };
-                let (sr, sc) = (r.stretch(nr.clone()), c.stretch(nc.clone()));
-                let patch = self.patch(engine, &sr.reach.samples, &sc.reach.samples, false)?;
-                let origin = (nr.start, nc.start);
-                for band in 0..bands {
-                    let plane = |what, part| passes::resample(&patch, band, what, part, (r, &sr), (c, &sc));
-                    let look_at =
-                        |values: &Array2<T>, by| gather(look, &Plane { values, origin }, by, rows, columns);
-                    let values = look_at(&plane(passes::Plane::Values, Part::Whole), By::Weights);
-                    let mask = patch.has_missing(band).then(|| {
-                        let whole = look_at(&plane(passes::Plane::Mask, Part::Whole), By::Weights);
-                        let raw = plane(passes::Plane::Mask, Part::Weights);
-                        let taps = (r.is_filtered() || c.is_filtered()).then(|| look_at(&raw, By::Weights));
-                        Mask { whole, taps, moduli: Some(look_at(&raw, By::Moduli)) }
-                    });
-                    each(Resampled { values, mask })?;
-                }
+                let signed = |r: Range<usize>| r.start as i64..r.end as i64;
+                let (rows, columns) = (signed(rows), signed(columns));
+                let patch = self.patch(engine, &rows, &columns, false)?;
+                let origin = (rows.start, columns.start);
+                return Ok(Some(Prepared {
+                    passes: self,
+                    engine,
+                    span: span.clone(),
+                    patch,
+                    stretches: None,
+                    origin,
+                }));
             }
-            Passes::Overlap { rows: r, columns: c } => {
-                let Plan::Overlap { back } = &engine.plan else {
-                    return Err(Error::unfit("the overlap pass was asked for another plan", ""));
-                };
-                // The widest image of a pixel in the block; under a projective map it stands at a corner.
-                let mut radius = (1.0f64, 1.0f64);
-                for r in [rows.start, rows.end] {
-                    for c in [columns.start, columns.end] {
-                        let j = back.jacobian(r as f64, c as f64);
-                        radius.0 = radius.0.max(1.0 + j[0][0].abs() + j[0][1].abs());
-                        radius.1 = radius.1.max(1.0 + j[1][0].abs() + j[1][1].abs());
-                    }
-                }
-                let Some((nr, nc)) = nodes(engine, back, rows, columns, radius, (false, false), None) else {
-                    for _ in 0..bands {
-                        each(Resampled { values: nothing(rows, columns), mask: None })?;
-                    }
-                    return finish(rows, columns, samples, counts, near_gap);
-                };
-                let (sr, sc) = (r.stretch(nr.clone()), c.stretch(nc.clone()));
-                let patch = self.patch(engine, &sr.reach.samples, &sc.reach.samples, false)?;
-                let origin = (nr.start, nc.start);
-                let size = engine.source_size();
-                let limits = (engine.rules.extension == Extension::Open).then_some(size);
-                let keep = |row: f64, column: f64| {
-                    let (x, y) = back.apply(row, column);
-                    engine.rules.outside == Outside::Extend || (is_inside(x, size.0) && is_inside(y, size.1))
-                };
-                for band in 0..bands {
-                    let over = |what| {
-                        let values = &passes::resample(&patch, band, what, Part::Whole, (r, &sr), (c, &sc));
-                        overlap(back, &Plane { values, origin }, limits, rows, columns, keep)
-                    };
-                    let values = over(passes::Plane::Values);
-                    let mask = patch.has_missing(band).then(|| Mask {
-                        whole: over(passes::Plane::Mask),
-                        taps: None,
-                        moduli: None,
-                    });
-                    each(Resampled { values, mask })?;
-                }
-            }
-        }
-        finish(rows, columns, samples, counts, near_gap)
+        };
+        let Some((nr, nc)) = nodes else { return Ok(None) };
+        let origin = (nr.start, nc.start);
+        let (r, c) = match self {
+            Passes::Axes { rows, columns, .. }
+            | Passes::Gather { rows, columns, .. }
+            | Passes::Overlap { rows, columns, .. }
+            | Passes::Majority { rows, columns, .. } => (rows.stretch(nr), columns.stretch(nc)),
+            Passes::Shear { .. } => return Ok(None),
+        };
+        let patch = self.patch(engine, &r.reach.samples, &c.reach.samples, swapped)?;
+        Ok(Some(Prepared {
+            passes: self,
+            engine,
+            span: span.clone(),
+            patch,
+            stretches: Some((r, c)),
+            origin,
+        }))
     }
 
     fn patch(
@@ -213,8 +184,268 @@ impl<T: Real> Passes<T> {
         columns: &Range<i64>,
         swapped: bool,
     ) -> Result<Patch> {
-        Patch::read(engine.source, rows, columns, swapped, engine.rules.extension, engine.codes.clone())
+        Patch::read(engine.source, rows, columns, swapped, engine.rules.edges(), engine.codes.clone())
     }
+}
+
+impl<T: Real> Prepared<'_, T> {
+    /// Whether a sample that the block needs is missing in a band.
+    pub fn has_missing(&self, band: usize) -> bool {
+        self.patch.has_missing(band)
+    }
+
+    /// The resampled values of a band with what the mask needs, if a sample is missing.
+    pub fn resampled(&self, band: usize, what: Plane) -> Resampled<T> {
+        let values = self.values(band, what);
+        let mask = self.has_missing(band).then(|| self.mask(band));
+        Resampled { values, mask }
+    }
+
+    fn axes_of<'b>(&'b self, rows: &'b Chain<T>, columns: &'b Chain<T>) -> Option<Axes<'b, T>> {
+        let (r, c) = self.stretches.as_ref()?;
+        Some(Axes { rows: (rows, r), columns: (columns, c) })
+    }
+
+    /// What the chains of both axes make of a band.
+    fn plane(&self, axes: &Axes<T>, band: usize, what: Plane, part: Part) -> Array2<T> {
+        resample(&self.patch, band, what, part, axes.rows, axes.columns)
+    }
+
+    /// Resampled values; NaN where there is nothing.
+    fn values(&self, band: usize, what: Plane) -> Array2<T> {
+        let nothing = || nothing(self.engine, &self.span);
+        match self.passes {
+            Passes::Axes { rows, columns, .. } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return nothing() };
+                let mut values = self.plane(&axes, band, what, Part::Whole);
+                self.blank(&mut values, &axes);
+                values
+            }
+            Passes::Gather { rows, columns, look, .. } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return nothing() };
+                let values = self.plane(&axes, band, what, Part::Whole);
+                self.look_at(look, &values, By::Weights)
+            }
+            Passes::Overlap { rows, columns, back } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return nothing() };
+                let mut out = self.over(back, &self.plane(&axes, band, what, Part::Whole), self.gives());
+                if self.engine.rules.values == Values::Total {
+                    let fill = self.of_nothing();
+                    out.iter_mut().filter(|v| v.to_f64().is_nan()).for_each(|v| *v = fill);
+                }
+                out
+            }
+            Passes::Majority { rows, columns, back } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return nothing() };
+                let plane = self.plane(&axes, band, what, Part::Whole);
+                let mask = self.has_missing(band).then(|| self.plane(&axes, band, Plane::Mask, Part::Whole));
+                let rules = self.engine.rules;
+                let keep = |r: f64, c: f64| self.keeps(back, r, c);
+                let limits = (rules.edges() == Extension::Open).then(|| self.engine.source_size());
+                majority(
+                    back,
+                    (&plane, mask.as_ref(), self.origin),
+                    limits,
+                    &self.span,
+                    rules.min_coverage,
+                    keep,
+                )
+            }
+            Passes::Shear { shears, .. } => {
+                let mut values = self.sheared(band, what);
+                let fill = self.of_nothing();
+                for ((r, c), v) in values.indexed_iter_mut() {
+                    if !shears.receives(self.span.rows.start + r as i64, self.span.columns.start + c as i64) {
+                        *v = fill;
+                    }
+                }
+                values
+            }
+        }
+    }
+
+    /// The responses to the mask.
+    fn mask(&self, band: usize) -> Mask<T> {
+        let empty = || Mask { whole: nothing(self.engine, &self.span), taps: None, moduli: None };
+        match self.passes {
+            Passes::Axes { rows, columns, .. } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return empty() };
+                let mut whole = self.plane(&axes, band, Plane::Mask, Part::Whole);
+                let filtered = rows.is_filtered() || columns.is_filtered();
+                let mut taps = filtered.then(|| self.plane(&axes, band, Plane::Mask, Part::Weights));
+                if self.engine.rules.values == Values::Total {
+                    let lengths = (lengths(axes.rows), lengths(axes.columns));
+                    divide(&mut whole, &lengths);
+                    taps.iter_mut().for_each(|t| divide(t, &lengths));
+                }
+                let (mr, mc) = (rows.moduli(axes.rows.1), columns.moduli(axes.columns.1));
+                let moduli = (mr.is_some() || mc.is_some()).then(|| {
+                    let axes = Axes {
+                        rows: (rows, mr.as_ref().unwrap_or(axes.rows.1)),
+                        columns: (columns, mc.as_ref().unwrap_or(axes.columns.1)),
+                    };
+                    let mut moduli = self.plane(&axes, band, Plane::Mask, Part::Weights);
+                    if self.engine.rules.values == Values::Total {
+                        // Moduli come divided by their sum, other weights sum to the cell's length.
+                        let unit = |l: Vec<f64>, own: bool| if own { vec![1.0; l.len()] } else { l };
+                        divide(
+                            &mut moduli,
+                            &(
+                                unit(lengths(axes.rows), mr.is_some()),
+                                unit(lengths(axes.columns), mc.is_some()),
+                            ),
+                        );
+                    }
+                    moduli
+                });
+                Mask { whole, taps, moduli }
+            }
+            Passes::Gather { rows, columns, look, .. } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return empty() };
+                let whole =
+                    self.look_at(look, &self.plane(&axes, band, Plane::Mask, Part::Whole), By::Weights);
+                let raw = self.plane(&axes, band, Plane::Mask, Part::Weights);
+                let filtered = rows.is_filtered() || columns.is_filtered();
+                let taps = filtered.then(|| self.look_at(look, &raw, By::Weights));
+                Mask { whole, taps, moduli: Some(self.look_at(look, &raw, By::Moduli)) }
+            }
+            Passes::Overlap { rows, columns, back } => {
+                let Some(axes) = self.axes_of(rows, columns) else { return empty() };
+                let whole = self.over(back, &self.plane(&axes, band, Plane::Mask, Part::Whole), Give::Mean);
+                Mask { whole, taps: None, moduli: None }
+            }
+            // The majority takes gaps as a class of their own.
+            Passes::Majority { .. } => {
+                Mask { whole: Array2::from_elem(self.span.size(), T::ONE), taps: None, moduli: None }
+            }
+            Passes::Shear { .. } => {
+                let mut whole = self.sheared(band, Plane::Mask);
+                let all = self.sheared(band, Plane::Ones);
+                whole.zip_mut_with(&all, |w, a| *w = if a.to_f64() > 1e-9 { *w / *a } else { T::ONE });
+                Mask { whole, taps: None, moduli: None }
+            }
+        }
+    }
+
+    fn sheared(&self, band: usize, what: Plane) -> Array2<T> {
+        let Passes::Shear { shears, prefilter } = self.passes else {
+            return nothing(self.engine, &self.span);
+        };
+        let (height, width) = self.patch.size();
+        let mut plane = Array2::<f64>::zeros((height, width));
+        let mut mask = vec![0.0; width];
+        for (r, mut line) in plane.rows_mut().into_iter().enumerate() {
+            if let Some(line) = line.as_slice_mut() {
+                what.load(&self.patch, band, r, line, &mut mask);
+            }
+        }
+        let view = &shears.view;
+        let size = self.engine.source_size();
+        let (n, m) = if view.swapped { (size.1, size.0) } else { size };
+        let input = |r: usize, c: usize| {
+            let r = if view.flip_rows { n - 1 - r } else { r };
+            let c = if view.flip_columns { m - 1 - c } else { c };
+            let (r, c) = if view.swapped { (c, r) } else { (r, c) };
+            let at = (r as i64 - self.origin.0, c as i64 - self.origin.1);
+            plane.get((at.0 as usize, at.1 as usize)).copied().unwrap_or(0.0)
+        };
+        let kernel = &self.engine.rules.kernel;
+        let out = shears.apply(kernel, prefilter.as_ref(), &self.span.rows, &self.span.columns, input);
+        out.mapv(T::from_f64)
+    }
+
+    fn look_at(&self, look: &Look, values: &Array2<T>, by: By) -> Array2<T> {
+        gather(look, &Nodes { values, origin: self.origin }, by, &self.span)
+    }
+
+    fn over(&self, back: &Map, values: &Array2<T>, give: Give) -> Array2<T> {
+        let rules = self.engine.rules;
+        let total = rules.values == Values::Total;
+        let inside_only = total || rules.edges() == Extension::Open;
+        let limits = inside_only.then(|| self.engine.source_size());
+        let keep = |r: f64, c: f64| total || self.keeps(back, r, c);
+        overlap(back, &Nodes { values, origin: self.origin }, limits, &self.span, give, keep)
+    }
+
+    fn gives(&self) -> Give {
+        if self.engine.rules.values == Values::Total { Give::Sum } else { Give::Mean }
+    }
+
+    fn keeps(&self, back: &Map, row: f64, column: f64) -> bool {
+        let size = self.engine.source_size();
+        let (x, y) = back.apply(row, column);
+        self.engine.rules.outside == Outside::Extend || (is_inside(x, size.0) && is_inside(y, size.1))
+    }
+
+    /// What a cell of totals is that receives nothing.
+    fn of_nothing(&self) -> T {
+        of_nothing(self.engine)
+    }
+
+    /// Marks as missing what lies outside, and what an open raster offers nothing for.
+    fn blank(&self, values: &mut Array2<T>, axes: &Axes<T>) {
+        let engine = self.engine;
+        let total = engine.rules.values == Values::Total;
+        let there = |axis: &(&Chain<T>, &Stretch<T>)| -> Vec<bool> {
+            let extends = engine.rules.outside == Outside::Extend;
+            axis.1
+                .wanted
+                .clone()
+                .map(|o| {
+                    if total {
+                        let (low, high) = axis.0.axis.cell(o);
+                        return high > low;
+                    }
+                    (extends || axis.0.axis.is_inside(o)) && axis.0.is_reached(axis.1, o)
+                })
+                .collect()
+        };
+        let (r, c) = (there(&axes.rows), there(&axes.columns));
+        if r.iter().chain(&c).all(|t| *t) {
+            return;
+        }
+        let fill = of_nothing(engine);
+        for (mut line, row_there) in values.rows_mut().into_iter().zip(r) {
+            line.iter_mut()
+                .zip(&c)
+                .filter(|(_, column_there)| !(row_there && **column_there))
+                .for_each(|(v, _)| *v = fill);
+        }
+    }
+}
+
+/// The chains of both axes with their stretches.
+struct Axes<'a, T> {
+    rows: (&'a Chain<T>, &'a Stretch<T>),
+    columns: (&'a Chain<T>, &'a Stretch<T>),
+}
+
+/// The lengths of the cells of a stretch, in input cells.
+fn lengths<T: Real>(axis: (&Chain<T>, &Stretch<T>)) -> Vec<f64> {
+    let length = |o| {
+        let (low, high) = axis.0.axis.cell(o);
+        high - low
+    };
+    axis.1.wanted.clone().map(length).collect()
+}
+
+fn divide<T: Real>(plane: &mut Array2<T>, lengths: &(Vec<f64>, Vec<f64>)) {
+    for (mut row, a) in plane.rows_mut().into_iter().zip(&lengths.0) {
+        row.iter_mut().zip(&lengths.1).filter(|(_, b)| *b * a > 0.0).for_each(|(v, b)| {
+            *v = T::from_f64(v.to_f64() / (a * b));
+        });
+    }
+}
+
+/// What an output pixel is that nothing reaches: missing; of totals that need not say so, 0.
+fn of_nothing<T: Real>(engine: &Engine) -> T {
+    let none = engine.rules.values == Values::Total && engine.rules.outside == Outside::Extend;
+    if none { T::default() } else { T::from_f64(f64::NAN) }
+}
+
+/// A block of which nothing is seen.
+pub(super) fn nothing<T: Real>(engine: &Engine, span: &Span) -> Array2<T> {
+    Array2::from_elem(span.size(), of_nothing(engine))
 }
 
 /// The stretch of one axis of a gather: where the other axis is widened, a factor a hair above 1 keeps both on samples.
@@ -222,131 +453,45 @@ fn widened(both: (f64, f64), own: f64) -> f64 {
     if both == (1.0, 1.0) { 1.0 } else { own.max(1.0 + 1e-12) }
 }
 
-fn signed(r: &Range<usize>) -> Range<i64> {
-    r.start as i64..r.end as i64
+/// Half the extent of the widest image of a pixel in the block; under a projective map it stands at a corner.
+fn widest_image(back: &Map, span: &Span) -> (f64, f64) {
+    let mut radius = (1.0f64, 1.0f64);
+    for r in [span.rows.start, span.rows.end] {
+        for c in [span.columns.start, span.columns.end] {
+            let j = back.jacobian(r as f64, c as f64);
+            radius.0 = radius.0.max(1.0 + j[0][0].abs() + j[0][1].abs());
+            radius.1 = radius.1.max(1.0 + j[1][0].abs() + j[1][1].abs());
+        }
+    }
+    radius
 }
 
-fn nothing<T: Real>(rows: &Range<usize>, columns: &Range<usize>) -> Array2<T> {
-    Array2::from_elem((rows.len(), columns.len()), T::from_f64(f64::NAN))
-}
-
-fn finish(
-    rows: &Range<usize>,
-    columns: &Range<usize>,
-    samples: Option<Samples>,
-    counts: Counts,
-    near_gap: u64,
-) -> Result<Block> {
-    let samples = samples.ok_or_else(|| Error::unfit("the raster has no bands", ""))?;
-    Ok(Block { window: Window { rows: rows.clone(), columns: columns.clone() }, samples, counts, near_gap })
-}
-
-fn resample_axes<T: Real>(
-    patch: &Patch,
-    band: usize,
-    rows: (&Chain<T>, &Stretch<T>),
-    columns: (&Chain<T>, &Stretch<T>),
-) -> Resampled<T> {
-    let values = passes::resample(patch, band, passes::Plane::Values, Part::Whole, rows, columns);
-    let mask = patch.has_missing(band).then(|| {
-        let on_mask =
-            |part, rows, columns| passes::resample(patch, band, passes::Plane::Mask, part, rows, columns);
-        let whole = on_mask(Part::Whole, rows, columns);
-        let taps =
-            (rows.0.is_filtered() || columns.0.is_filtered()).then(|| on_mask(Part::Weights, rows, columns));
-        let (mr, mc) = (rows.0.moduli(rows.1), columns.0.moduli(columns.1));
-        let moduli = (mr.is_some() || mc.is_some()).then(|| {
-            let rows = (rows.0, mr.as_ref().unwrap_or(rows.1));
-            let columns = (columns.0, mc.as_ref().unwrap_or(columns.1));
-            on_mask(Part::Weights, rows, columns)
-        });
-        Mask { whole, taps, moduli }
-    });
-    Resampled { values, mask }
-}
-
-/// Marks as missing what lies outside, and what an open raster offers nothing for.
-fn blank<T: Real>(
-    engine: &Engine,
-    values: &mut Array2<T>,
-    rows: (&Chain<T>, &Stretch<T>),
-    columns: (&Chain<T>, &Stretch<T>),
-) {
-    let nan = T::from_f64(f64::NAN);
-    let there = |axis: &(&Chain<T>, &Stretch<T>)| -> Vec<bool> {
-        let extends = engine.rules.outside == Outside::Extend;
-        axis.1
-            .wanted
-            .clone()
-            .map(|o| (extends || axis.0.axis.is_inside(o)) && axis.0.is_reached(axis.1, o))
-            .collect()
+/// The input's own pixels under a block of cells; `None` if there are none.
+fn touched_nodes(engine: &Engine, back: &Map, span: &Span) -> Option<(Range<i64>, Range<i64>)> {
+    let edges = |r: &Range<i64>| (r.start as f64 - 0.5, r.end as f64 - 0.5);
+    let b = back.bounds(edges(&span.rows), edges(&span.columns));
+    let (n, m) = engine.source_size();
+    let range = |(low, high): (f64, f64), n: usize| {
+        let range = (low.floor().max(0.0) as i64)..((high.ceil() + 1.0).min(n as f64) as i64);
+        (!range.is_empty()).then_some(range)
     };
-    let (r, c) = (there(&rows), there(&columns));
-    if r.iter().chain(&c).all(|t| *t) {
-        return;
-    }
-    for (mut line, row_there) in values.rows_mut().into_iter().zip(r) {
-        line.iter_mut()
-            .zip(&c)
-            .filter(|(_, column_there)| !(row_there && **column_there))
-            .for_each(|(v, _)| *v = nan);
-    }
-}
-
-/// Divides by the response to the mask and drops what finds too little; NaN = missing. Also counts the outputs near a gap.
-///
-/// The value is S[m f] / S[m], with S the whole resampling and m the mask. It is missing where the kernel's own taps, or
-/// their moduli, find less than `min_coverage` of their weight, or S[m] less than half of that: a cardinal kernel
-/// that stands almost wholly on a gap would have to be guessed from its ripples.
-fn settle<T: Real>(resampled: Resampled<T>, min_coverage: f64) -> (Array2<T>, u64) {
-    let Resampled { mut values, mask } = resampled;
-    let Some(mask) = mask else { return (values, 0) };
-    const NEAR_GAP: f64 = 1e-3;
-    let least = min_coverage.max(1e-6);
-    let near: u64 = values
-        .axis_iter_mut(ndarray::Axis(0))
-        .into_par_iter()
-        .enumerate()
-        .map(|(r, mut line)| {
-            let mut near = 0;
-            for (c, v) in line.iter_mut().enumerate() {
-                let whole = mask.whole[(r, c)].to_f64();
-                // Where no sample is missing the response is 1 but for rounding: the value stays as it is, to the bit.
-                if (whole - 1.0).abs() <= T::UNITY_SLACK {
-                    continue;
-                }
-                let taps = mask.taps.as_ref().map_or(whole, |m| m[(r, c)].to_f64());
-                let moduli = mask.moduli.as_ref().map_or(taps, |m| m[(r, c)].to_f64());
-                if taps < least || moduli < least || whole < 0.5 * least || v.to_f64().is_nan() {
-                    *v = T::from_f64(f64::NAN);
-                    continue;
-                }
-                near += u64::from((whole - 1.0).abs() > NEAR_GAP);
-                *v = *v / mask.whole[(r, c)];
-            }
-            near
-        })
-        .collect::<Vec<u64>>()
-        .iter()
-        .sum();
-    (values, near)
+    Some((range(b.rows, n)?, range(b.columns, m)?))
 }
 
 /// The nodes (extended indices of the gathered plane) that a block of outputs looks at; `None` if it sees nothing.
 fn nodes(
     engine: &Engine,
     back: &Map,
-    rows: &Range<usize>,
-    columns: &Range<usize>,
+    span: &Span,
     radius: (f64, f64),
     whole: (bool, bool),
     lattice: Option<Lattice>,
 ) -> Option<(Range<i64>, Range<i64>)> {
-    let b = back
-        .bounds((rows.start as f64, rows.end as f64 - 1.0), (columns.start as f64, columns.end as f64 - 1.0));
+    let ends = |r: &Range<i64>| (r.start as f64, r.end as f64 - 1.0);
+    let b = back.bounds(ends(&span.rows), ends(&span.columns));
     let (n, m) = engine.source_size();
     let lattice = lattice.unwrap_or(Lattice { rows: (1.0, 0.0), columns: (1.0, 0.0) });
-    let open = engine.rules.extension == Extension::Open;
+    let open = engine.rules.edges() == Extension::Open;
     let axes = engine.gather_axes();
     let range = |(low, high): (f64, f64),
                  n: usize,

@@ -3,10 +3,14 @@
 use super::axis::{Axis, Way, choose_way};
 use super::gather::stretch_at;
 use super::rules::{Outside, Reduce, Rules};
+use super::shear::Shears;
+use super::values::Values;
 use crate::error::{Error, Result};
+use crate::grid::Grid;
 use crate::kernel::{Extension, Shape};
 use crate::map::Map;
 use crate::raster::SampleType;
+use std::ops::Range;
 
 /// The longest line that the one polynomial is drawn through.
 const POLYNOMIAL_LIMIT: usize = 64;
@@ -48,6 +52,13 @@ pub enum Plan {
         /// From output to input positions.
         back: Map,
     },
+    /// A quarter turn, then three passes that keep totals.
+    Shear(Box<Shears>),
+    /// The class that covers most of each pixel.
+    Majority {
+        /// From output to input positions.
+        back: Map,
+    },
 }
 
 /// Size of a raster: rows, columns.
@@ -68,12 +79,19 @@ impl Plan {
         };
         let least_squares = rules.reduce == Reduce::LeastSquares;
         // Nearest picks and area covers; neither is widened.
+        let total = rules.values == Values::Total;
         let widens = wanted
+            && !total
             && kernel.name() != "nearest"
             && kernel.name() != "bspline:0"
             && *kernel.shape() != Shape::Area;
         let slack = |step: f64| if widens && step.abs() > 1.0 + 1e-9 { step.abs() } else { 1.0 };
         let back = back.checked(target.0, target.1)?;
+        if rules.values == Values::Label
+            && (*kernel.shape() == Shape::Area || (wanted && shrinks(&back, target)))
+        {
+            return Ok(Plan::Majority { back });
+        }
         if let Some(axes) = back.as_axes() {
             let lengths = if axes.swapped { (source.1, source.0) } else { source };
             let axis = |source: usize, target: usize, (step, offset): (f64, f64)| -> Result<Axis> {
@@ -92,7 +110,11 @@ impl Plan {
                         "choose a larger factor or a smaller pixel",
                     ));
                 }
-                let way = choose_way(kernel, step, offset, slack(step), least_squares);
+                let way = match choose_way(kernel, step, offset, slack(step), least_squares) {
+                    Way::Copy => Way::Copy,
+                    _ if total => Way::Conserve,
+                    way => way,
+                };
                 if let Way::LeastSquares(_) = way {
                     check_least_squares(rules)?;
                 }
@@ -117,8 +139,11 @@ impl Plan {
             }
             return Ok(Plan::RowsAndColumns { swapped: axes.swapped, rows, columns });
         }
-        if *kernel.shape() == Shape::Area {
+        if *kernel.shape() == Shape::Area || (total && !back.is_affine()) {
             return Ok(Plan::Overlap { back });
+        }
+        if total {
+            return Ok(Plan::Shear(Box::new(Shears::new(source, &back)?)));
         }
         let mut stretch = (1.0f64, 1.0f64);
         let mut local = false;
@@ -147,6 +172,23 @@ impl Plan {
         Ok(Plan::Gather { back, stretch, local, least_squares })
     }
 
+    /// The frame that holds every cell that totals reach under a turned map, and the way back from it: the passes reach a
+    /// little farther than the turned outline. Other plans keep `target` and `back`.
+    ///
+    /// # Errors
+    /// As [`Plan::new`].
+    pub fn fit(source: Size, target: Grid, back: Map, rules: &Rules) -> Result<(Grid, Map)> {
+        let Plan::Shear(shears) = Plan::new(source, (target.rows, target.columns), &back, rules)? else {
+            return Ok((target, back));
+        };
+        let (rows, columns) = shears.touched();
+        let low = (rows.start as f64, columns.start as f64);
+        let size = ((rows.end - rows.start) as usize, (columns.end - columns.start) as usize);
+        let grid = target.stepped(size.0, size.1, (1.0, 1.0), low);
+        grid.check()?;
+        Ok((grid, Map::shift(low.0, low.1).then(&back)))
+    }
+
     /// The name that the ledger tells.
     pub fn method(&self) -> &'static str {
         match self {
@@ -154,10 +196,45 @@ impl Plan {
             Plan::RowsAndColumns { .. } => "rows-and-columns",
             Plan::Gather { .. } => "gather",
             Plan::Overlap { .. } => "overlap",
+            Plan::Shear(_) => "shear",
+            Plan::Majority { .. } => "majority",
         }
     }
 
-    /// Whether some output pixel's centre lies outside the input's edges.
+    /// Rows and columns of the output's lattice, beyond its frame as well, that receive anything of a raster of totals; `None`
+    /// where the map sends it beyond all bounds.
+    pub fn touched(&self, source: Size, rules: &Rules) -> Option<(Range<i64>, Range<i64>)> {
+        let axis = |a: &Axis| {
+            let edge = |u: f64| (u - 0.5 - a.offset) / a.step + 0.5;
+            let (low, high) = (edge(0.0), edge(a.source as f64));
+            Some(whole(low.min(high).floor())? - 1..whole(low.max(high).ceil())? + 1)
+        };
+        if rules.values != Values::Total {
+            return None;
+        }
+        match self {
+            Plan::Copy { swapped, rows, columns } => {
+                let lengths = if *swapped { (source.1, source.0) } else { source };
+                let line = |n: usize, (step, offset): (i64, i64)| {
+                    let (a, b) = (-offset * step, (n as i64 - 1 - offset) * step);
+                    a.min(b)..a.max(b) + 1
+                };
+                Some((line(lengths.0, *rows), line(lengths.1, *columns)))
+            }
+            Plan::RowsAndColumns { rows, columns, .. } => Some((axis(rows)?, axis(columns)?)),
+            Plan::Shear(shears) => Some(shears.touched()),
+            Plan::Overlap { back } => {
+                let onward = back.invert().ok()?.checked(source.0, source.1).ok()?;
+                let b = onward.bounds((-0.5, source.0 as f64 - 0.5), (-0.5, source.1 as f64 - 0.5));
+                let line = |(low, high): (f64, f64)| Some(whole(low.floor())? - 1..whole(high.ceil())? + 2);
+                Some((line(b.rows)?, line(b.columns)?))
+            }
+            Plan::Gather { .. } | Plan::Majority { .. } => None,
+        }
+    }
+
+    /// Whether some output pixel has nothing of the input: its centre lies outside the input's edges, or, of totals, it
+    /// receives nothing.
     pub fn looks_outside(&self, source: Size, target: Size) -> bool {
         match self {
             Plan::Copy { swapped, rows, columns } => {
@@ -167,8 +244,23 @@ impl Plan {
                 };
                 out(lengths.0, target.0, *rows) || out(lengths.1, target.1, *columns)
             }
+            Plan::RowsAndColumns { rows, columns, .. }
+                if rows.way == Way::Conserve || columns.way == Way::Conserve =>
+            {
+                let empty = |a: &Axis| {
+                    [0, a.target as i64 - 1].iter().any(|o| {
+                        let (low, high) = a.cell(*o);
+                        !(high > low)
+                    })
+                };
+                empty(rows) || empty(columns)
+            }
             Plan::RowsAndColumns { rows, columns, .. } => !inside(rows, columns),
-            Plan::Gather { back, .. } | Plan::Overlap { back } => {
+            Plan::Shear(shears) => {
+                let (h, w) = (target.0 as i64 - 1, target.1 as i64 - 1);
+                [(0, 0), (0, w), (h, 0), (h, w)].iter().any(|p| !shears.receives(p.0, p.1))
+            }
+            Plan::Gather { back, .. } | Plan::Overlap { back } | Plan::Majority { back } => {
                 let (h, w) = (target.0 as f64 - 1.0, target.1 as f64 - 1.0);
                 [(0.0, 0.0), (0.0, w), (h, 0.0), (h, w)].iter().any(|p| {
                     let (r, c) = back.apply(p.0, p.1);
@@ -184,8 +276,24 @@ impl Plan {
         // The prefilter amplifies rounding along each axis; a factor of 3 (cubic spline) is what f32 bears.
         let amplified = rules.kernel.amplification() > 3.5;
         let whole_line = matches!(rules.kernel.shape(), Shape::Sinc | Shape::Polynomial);
-        wide(from) || wide(to) || amplified || whole_line || rules.reduce == Reduce::LeastSquares
+        rules.values != Values::Density
+            || wide(from)
+            || wide(to)
+            || amplified
+            || whole_line
+            || rules.reduce == Reduce::LeastSquares
     }
+}
+
+/// A whole number as an index; `None` beyond what indices are sure of.
+fn whole(v: f64) -> Option<i64> {
+    (v.abs() < 9e15).then_some(v as i64)
+}
+
+/// Whether some output pixel covers more than an input pixel along an axis.
+fn shrinks(back: &Map, target: Size) -> bool {
+    let (h, w) = (target.0 as f64 - 1.0, target.1 as f64 - 1.0);
+    [(0.0, 0.0), (0.0, w), (h, 0.0), (h, w)].iter().any(|p| stretch_at(back, p.0, p.1) != (1.0, 1.0))
 }
 
 fn inside(rows: &Axis, columns: &Axis) -> bool {
@@ -210,7 +318,7 @@ fn check_least_squares(rules: &Rules) -> Result<()> {
 
 fn check_whole_line_kernels(source: Size, rules: &Rules) -> Result<()> {
     match rules.kernel.shape() {
-        Shape::Sinc if !matches!(rules.extension, Extension::HalfSymmetric | Extension::Periodic) => {
+        Shape::Sinc if !matches!(rules.edges(), Extension::HalfSymmetric | Extension::Periodic) => {
             Err(Error::usage(
                 format!("the sinc kernel cannot extend a raster as {}", rules.extension),
                 "use --extend half-symmetric or --extend periodic",

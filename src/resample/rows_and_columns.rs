@@ -10,12 +10,41 @@ use ndarray::{Array2, Axis as NdAxis};
 const STRIP: usize = 4 * LANES;
 
 /// What of the patch is resampled.
-#[derive(Clone, Copy, Debug, PartialEq, Eq)]
+#[derive(Clone, Copy, Debug, PartialEq)]
 pub enum Plane {
     /// The samples, missing ones as 0.
     Values,
     /// 1 where a sample is there, 0 where not.
     Mask,
+    /// 1 everywhere.
+    Ones,
+    /// The cosine of samples with this period, 0 where missing.
+    Cosine(f64),
+    /// The sine.
+    Sine(f64),
+}
+
+impl Plane {
+    /// Writes one extended row of a patch; `mask` is a buffer of the same length.
+    pub fn load<T: Real>(self, patch: &Patch, band: usize, row: usize, out: &mut [T], mask: &mut [T]) {
+        let circle = |out: &mut [T], mask: &[T], period: f64, of: fn(f64) -> f64| {
+            let turn = 2.0 * std::f64::consts::PI / period;
+            out.iter_mut().zip(mask).for_each(|(v, m)| *v = *m * T::from_f64(of(v.to_f64() * turn)));
+        };
+        match self {
+            Plane::Values => patch.row(band, row, out, None),
+            Plane::Ones => out.fill(T::ONE),
+            Plane::Mask => patch.row(band, row, mask, Some(out)),
+            Plane::Cosine(period) => {
+                patch.row(band, row, out, Some(mask));
+                circle(out, mask, period, f64::cos);
+            }
+            Plane::Sine(period) => {
+                patch.row(band, row, out, Some(mask));
+                circle(out, mask, period, f64::sin);
+            }
+        }
+    }
 }
 
 /// Resamples one band of a patch. `rows` and `columns` come with the stretches they are wanted for, whose sample ranges are
@@ -87,16 +116,7 @@ impl<T: Real> RowScratch<T> {
 
     /// Puts row `row` of the patch into lane `lane`.
     fn load(&mut self, patch: &Patch, band: usize, row: usize, lane: usize, plane: Plane) {
-        let from = match plane {
-            Plane::Values => {
-                patch.row(band, row, &mut self.line, None);
-                &self.line
-            }
-            Plane::Mask => {
-                patch.row(band, row, &mut self.line, Some(&mut self.mask));
-                &self.mask
-            }
-        };
-        self.lanes.chunks_exact_mut(LANES).zip(from).for_each(|(lanes, v)| lanes[lane] = *v);
+        plane.load(patch, band, row, &mut self.line, &mut self.mask);
+        self.lanes.chunks_exact_mut(LANES).zip(&self.line).for_each(|(lanes, v)| lanes[lane] = *v);
     }
 }

@@ -1,7 +1,8 @@
 //! The choices of one resampling, apart from where things are.
 
+use super::values::{Limit, Values};
 use crate::error::{Error, Result};
-use crate::kernel::{Extension, Kernel};
+use crate::kernel::{Extension, Kernel, Shape};
 use crate::raster::SampleType;
 use serde::{Deserialize, Serialize};
 
@@ -40,6 +41,12 @@ pub struct Rules {
     pub extension: Extension,
     /// Default missing.
     pub outside: Outside,
+    /// What a number is; default density.
+    #[serde(default)]
+    pub values: Values,
+    /// What holds overshoot; default nothing.
+    #[serde(default)]
+    pub limit: Limit,
     /// Default auto.
     pub reduce: Reduce,
     /// A code that means "no data", beside NaN and what the file declares.
@@ -66,6 +73,8 @@ impl Default for Rules {
             kernel: Kernel::default(),
             extension: Extension::default(),
             outside: Outside::default(),
+            values: Values::default(),
+            limit: Limit::default(),
             reduce: Reduce::default(),
             missing: None,
             min_coverage: 0.5,
@@ -78,11 +87,46 @@ impl Default for Rules {
 }
 
 impl Rules {
-    /// Refuses numbers out of range.
+    /// What stands beyond the edges: totals have nothing there and are kept whole by mirrored samples, whatever is asked.
+    pub fn edges(&self) -> Extension {
+        match self.values {
+            Values::Total => Extension::HalfSymmetric,
+            _ => self.extension,
+        }
+    }
+
+    /// Refuses numbers out of range and choices that contradict each other.
     ///
     /// # Errors
     /// Names the option.
     pub fn check(&self) -> Result<()> {
+        let name = self.kernel.name();
+        if self.values == Values::Label && !matches!(name, "nearest" | "bspline:0" | "area") {
+            return Err(Error::usage(
+                format!("labels are never mixed: {name} would invent classes between them"),
+                "use --kernel nearest, or --kernel area for the majority",
+            ));
+        }
+        if self.values == Values::Total && self.reduce == Reduce::LeastSquares {
+            return Err(Error::usage(
+                "totals are not reduced by least squares: their sum would not be kept",
+                "leave --reduce out",
+            ));
+        }
+        if self.limit == Limit::Neighbours {
+            if matches!(self.values, Values::Label | Values::Cyclic(_)) {
+                return Err(Error::usage(
+                    format!("--limit neighbours has no meaning for --values {}", self.values),
+                    "leave --limit out",
+                ));
+            }
+            if matches!(self.kernel.shape(), Shape::Sinc | Shape::Polynomial) {
+                return Err(Error::usage(
+                    format!("--limit neighbours needs a kernel of finite support, not {name}"),
+                    "use --kernel bspline:5 or lanczos:4",
+                ));
+            }
+        }
         if !(0.0..=1.0).contains(&self.min_coverage) {
             return Err(Error::usage(
                 format!("--min-coverage {} is not between 0 and 1", self.min_coverage),

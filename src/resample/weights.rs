@@ -1,6 +1,7 @@
 //! Weights of one axis: from positions to banded rows, in f64, cast once.
 
 use super::axis::{Axis, Way};
+use super::conserve::Conserving;
 use super::least_squares::Projection;
 use crate::kernel::windowed::dirichlet;
 use crate::kernel::{Extension, Kernel, Pieces, Shape};
@@ -34,6 +35,8 @@ enum Kind {
     Barycentric(Vec<f64>),
     /// Whole positions.
     Pick,
+    /// Cells of this length that keep totals.
+    Cell(f64, Conserving),
 }
 
 impl Weigher {
@@ -49,6 +52,7 @@ impl Weigher {
             Way::Area(a) => Kind::Overlap(a),
             Way::Fourier(a) => Kind::Periodic(a),
             Way::Polynomial => Kind::Barycentric(barycentric(axis.source)),
+            Way::Conserve => Kind::Cell(axis.step.abs(), Conserving::new(kernel, axis.source)),
         };
         Weigher { kernel: kernel.clone(), source: axis.source, extension, kind }
     }
@@ -86,12 +90,17 @@ impl Weigher {
             Kind::Overlap(a) => 0.5 * a + 0.5,
             Kind::Periodic(_) | Kind::Barycentric(_) => self.source as f64,
             Kind::Pick => 0.0,
+            Kind::Cell(step, c) => c.radius() + 0.5 * step + 1.0,
         }
     }
 
     /// Whether weights fall on the whole line, wherever the position.
     pub fn is_whole_line(&self) -> bool {
-        matches!(self.kind, Kind::Periodic(_) | Kind::Barycentric(_))
+        match &self.kind {
+            Kind::Periodic(_) | Kind::Barycentric(_) => true,
+            Kind::Cell(_, conserving) => conserving.is_whole_line(),
+            _ => false,
+        }
     }
 
     /// The weights at `x`, on the (extended) samples `first..first + out.len()`; they sum to 1. Empty where an open line has
@@ -126,12 +135,26 @@ impl Weigher {
                 whole_line_polynomial(x, nodes, out);
                 0
             }
+            Kind::Cell(step, conserving) => {
+                // As a response to waves and noise: of a cell of unit total.
+                let first = conserving.cell(x + 0.5 - 0.5 * step, x + 0.5 + 0.5 * step, out);
+                normalise(out);
+                first
+            }
         };
         if self.extension == Extension::Open && !self.is_whole_line() {
             clip_open(first, self.source, out)
         } else {
             trim(first, out)
         }
+    }
+
+    /// The weights of output `o` of an axis; of a cell that keeps totals they sum to its length.
+    pub fn of_output(&self, axis: &Axis, o: i64, out: &mut Vec<f64>) -> i64 {
+        let Kind::Cell(_, conserving) = &self.kind else { return self.weights(axis.position(o), out) };
+        let (low, high) = axis.cell(o);
+        let first = conserving.cell(low, high, out);
+        trim(first, out)
     }
 
     /// Samples `value(x - k)` over |x - k| <= radius, divided by the sum.
@@ -171,7 +194,7 @@ pub(super) fn band(period: usize, stretch: f64, mirrored: bool) -> (usize, bool)
 }
 
 /// Weights of the polynomial through samples 0..n: `(-1)^k C(n - 1, k)`, the barycentric weights of equal spacing.
-fn barycentric(n: usize) -> Vec<f64> {
+pub(super) fn barycentric(n: usize) -> Vec<f64> {
     let mut w = vec![1.0; n];
     for k in 1..n {
         w[k] = -w[k - 1] * (n - k) as f64 / k as f64;
@@ -179,7 +202,7 @@ fn barycentric(n: usize) -> Vec<f64> {
     w
 }
 
-fn whole_line_polynomial(x: f64, nodes: &[f64], out: &mut Vec<f64>) {
+pub(super) fn whole_line_polynomial(x: f64, nodes: &[f64], out: &mut Vec<f64>) {
     if x.fract() == 0.0 && x >= 0.0 && (x as usize) < nodes.len() {
         out.extend((0..nodes.len()).map(|k| if k == x as usize { 1.0 } else { 0.0 }));
         return;
@@ -245,7 +268,7 @@ impl<T: Real> Banded<T> {
         let mut banded = Banded { start: Vec::new(), at: vec![0], weights: Vec::new() };
         let mut w = Vec::new();
         for o in range {
-            banded.start.push(weigher.weights(axis.position(o), &mut w));
+            banded.start.push(weigher.of_output(axis, o, &mut w));
             banded.weights.extend(w.iter().map(|v| T::from_f64(*v)));
             banded.at.push(banded.weights.len());
         }

@@ -59,7 +59,8 @@ pub fn run(
     let plan = Plan::new(size, target, back, rules).unwrap();
     let sample_type = rules.sample_type.unwrap_or(source.header.sample_type);
     let codes = MissingCodes { codes: rules.missing.into_iter().collect() };
-    let engine = Engine { source, target, plan, rules, codes, sample_type, fill: None };
+    let engine =
+        Engine { source, target, plan, rules, codes, sample_type, fill: None, extras: Default::default() };
     let mut out = vec![f64::NAN; target.0 * target.1];
     engine
         .run(1, side, &mut |block| {
