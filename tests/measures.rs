@@ -147,3 +147,80 @@ fn the_sum_keeps_what_plain_addition_drops() {
     let sum: Sum = [1.0, 1e100, 1.0, -1e100].into_iter().collect();
     assert_eq!(sum.value(), 2.0);
 }
+
+/// A job on files: the ledger of a raster resampled under `back` onto `target`.
+fn ledger_of(
+    values: Vec<f64>,
+    size: (usize, usize),
+    back: Map,
+    target: (usize, usize),
+    rules: regauge::resample::Rules,
+) -> regauge::report::Ledger {
+    use regauge::raster::{Header, Samples, Window, create};
+    let folder = std::env::temp_dir().join(format!("regauge-flux-{}-{:p}", std::process::id(), &values));
+    std::fs::create_dir_all(&folder).unwrap();
+    let (input, output) = (folder.join("in.npy"), folder.join("out.npy"));
+    let grid = regauge::grid::Grid::new(size.0, size.1);
+    let header = Header::new(grid.clone(), 1, regauge::raster::SampleType::F64);
+    let mut sink = create(&input, &header, true).unwrap();
+    sink.write(&Window::whole(&grid), &Samples::F64(values)).unwrap();
+    sink.finish().unwrap();
+    let target = regauge::grid::Grid::new(target.0, target.1);
+    let job = regauge::job::Job { input, output, target, back, rules };
+    let ledger = job.run(&Default::default(), &()).unwrap();
+    std::fs::remove_dir_all(&folder).unwrap();
+    ledger
+}
+
+#[test]
+fn signal_is_compared_where_both_are_there_pixel_by_pixel_by_area() {
+    use regauge::map::Motion;
+    use regauge::resample::Rules;
+    let (rows, columns) = (90, 110);
+    let mut v: Vec<f64> =
+        (0..rows * columns).map(|i| 50.0 + 30.0 * ((i * 7919) % 101) as f64 / 101.0).collect();
+    for i in (0..rows * columns).filter(|i| (i * 31) % 97 < 3) {
+        v[i] = f64::NAN;
+    }
+    let turn = |turn| {
+        Motion { turn, scale: 0.9, ..Motion::about_centre(rows, columns) }.map().unwrap().invert().unwrap()
+    };
+    let maps =
+        [turn(17.3), turn(90.0), turn(-140.0), Map::axes((1.7, 3.2), (-0.6, 80.0)), Map::shift(0.4, -30.2)];
+    for back in maps {
+        // The exact mean over what is there of each pixel holds just the signal under it: whatever is off is in the comparison.
+        let rules =
+            Rules { kernel: "area".parse().unwrap(), extension: "open".parse().unwrap(), ..Rules::default() };
+        let ledger = ledger_of(v.clone(), (rows, columns), back, (95, 100), rules);
+        let closure = ledger.flux.closure.unwrap();
+        assert!(closure.abs() < 1e-12, "{back:?}: {closure:e}");
+        let local = ledger.flux.local_closure.unwrap();
+        assert_eq!(local.rows * local.columns, local.values.len());
+        assert!(local.values.iter().flatten().count() > 100);
+        let worst = local.values.iter().flatten().fold(0.0f64, |m, c| m.max(c.abs()));
+        assert!(worst < 1e-11, "{back:?}: a part is off by {worst:e}");
+        let (a, b) = (ledger.centroid.before.unwrap(), ledger.centroid.after.unwrap());
+        assert!((a[0] - b[0]).hypot(a[1] - b[1]) < 0.05, "{a:?} {b:?}");
+    }
+}
+
+#[test]
+fn the_local_closure_shows_where_signal_went() {
+    use regauge::measure::{Frame, Local};
+    let (rows, columns) = (64, 80);
+    let back = Map::axes((2.0, 0.5), (2.0, 0.5));
+    let mut local = Local::new(&back, (rows, columns), (32, 40), false).unwrap();
+    local.add_before(&(0..rows), &(0..columns), &vec![1.0; rows * columns]);
+    let frame = Frame::new(&back, (32, 40), (rows, columns));
+    // A patch of 4 x 6 output pixels lost a tenth.
+    let lost = |i: usize| (8..12).contains(&(i / 40)) && (30..36).contains(&(i % 40));
+    let after: Vec<f64> = (0..32 * 40).map(|i| if lost(i) { 0.9 } else { 1.0 }).collect();
+    local.add_after(&frame, &(0..32), &(0..40), &after);
+    let (r, c, values) = local.closure();
+    assert_eq!((r, c, local.step()), (16, 14, (2, 3)));
+    for (i, v) in values.iter().enumerate() {
+        let inside = (4..6).contains(&(i / c)) && (10..12).contains(&(i % c));
+        let want = if inside { -0.1 } else { 0.0 };
+        assert!((v.unwrap() - want).abs() < 1e-12, "{i}: {v:?}");
+    }
+}

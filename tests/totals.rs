@@ -136,6 +136,48 @@ fn totals_close_for_every_kernel_and_map() {
 }
 
 #[test]
+fn limits_hold_and_the_sum_stays() {
+    let size = (60, 70);
+    // Faint sharp stars on nothing: splines undershoot around each.
+    let v: Vec<f64> =
+        values(size.0 * size.1, 3).iter().map(|v| if *v > 0.985 { 500.0 * v } else { 0.0 }).collect();
+    let source = Memory::new(size.0, size.1, v, SampleType::F64);
+    let before = total(&source.values);
+    let turn = Motion { turn: 17.3, ..Motion::about_centre(size.0, size.1) }.map().unwrap().invert().unwrap();
+    for (back, target) in [
+        (Map::axes((1.0, 0.4), (1.0, -0.3)), size),
+        (Map::axes((0.6, -0.2), (0.7, 0.1)), (99, 99)),
+        (turn, size),
+    ] {
+        let free = rules("bspline:3");
+        let (out, _) = run(&source, target, &back, &free, None);
+        let least = out.iter().copied().fold(0.0, f64::min);
+        assert!(least < -1.0, "nothing to limit: {least}");
+        let held = Rules { limit: regauge::resample::Limit::Neighbours, ..free };
+        let (out, b) = run(&source, target, &back, &held, None);
+        let closure = (total(&out) + b.left_frame.value() - before) / before;
+        assert!(closure.abs() < 1e-12, "{closure:e}");
+        assert!(b.moved.value() > 1.0 && b.limited > 10);
+        let least_held = out.iter().copied().fold(0.0, f64::min);
+        assert!(
+            least_held > 0.03 * least,
+            "{least_held} of {least}, {:?} beyond, {:?} moved",
+            b.beyond_limits,
+            b.moved
+        );
+        let (cut, again) = run(&source, target, &back, &held, Some(17));
+        assert!(out.iter().zip(&cut).all(|(a, b)| a.to_bits() == b.to_bits() || (a.is_nan() && b.is_nan())));
+        assert!((b.moved.value() / again.moved.value() - 1.0).abs() < 1e-12);
+        assert_eq!(b.limited, again.limited);
+    }
+    // Densities are cut at the range of the samples around.
+    let held =
+        Rules { values: Values::Density, limit: regauge::resample::Limit::Neighbours, ..rules("bspline:5") };
+    let (out, b) = run(&source, size, &Map::shift(0.4, -0.3), &held, None);
+    assert!(out.iter().filter(|v| !v.is_nan()).all(|v| *v >= 0.0) && b.limited > 10);
+}
+
+#[test]
 fn every_kernel_closes() {
     let (rows, columns) = (23, 31);
     let source = Memory::new(rows, columns, stars(rows, columns), SampleType::F64);

@@ -3,13 +3,13 @@
 use super::{Job, Progress, reading_windows};
 use crate::error::{Error, Result};
 use crate::map::Map;
-use crate::measure::{Balance, Costs, Frame, Sum, closure, step_overshoot};
+use crate::measure::{Balance, Costs, Frame, Local, Sum, closure, step_overshoot};
 use crate::raster::{Digest, Header, MissingCodes, Sample, SampleType, Samples, Source, Window};
 use crate::report::{
-    Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, Noise, Pixels, RasterEntry, Ringing, Time,
-    Transfer, peak_memory_bytes,
+    Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, LocalClosure, Noise, Pixels, RasterEntry,
+    Ringing, Time, Transfer, peak_memory_bytes,
 };
-use crate::resample::{Counts, Plan, Reduce, Rules, Shifted, Values};
+use crate::resample::{Counts, Limit, Plan, Reduce, Rules, Shifted, Values};
 use crate::with_samples;
 use rayon::prelude::*;
 
@@ -101,6 +101,19 @@ impl Account {
         }
     }
 
+    /// Takes back what does not count on both sides.
+    pub(super) fn take(&mut self, band: usize, signal: f64, modulus: f64, moments: (f64, f64)) {
+        let balances = if self.framed.is_empty() { &mut self.bands } else { &mut self.framed };
+        if let Some(b) = balances.get_mut(band) {
+            b.take(signal, modulus, moments);
+        }
+    }
+
+    /// How pixels lie in the other frame.
+    pub(super) fn frame(&self) -> &Frame {
+        &self.frame
+    }
+
     /// Missing samples over all bands.
     pub fn missing(&self) -> u64 {
         self.bands.iter().map(|b| b.missing).sum()
@@ -136,10 +149,27 @@ pub(super) fn as_f64<S: Sample>(stored: &[S], codes: &MissingCodes, out: &mut [f
     }
 }
 
+/// All bands of a window as f64, NaN = missing, one after the other.
+pub(super) fn bands_of<'a>(
+    samples: &'a Samples,
+    window: &Window,
+    bands: usize,
+    codes: &'a MissingCodes,
+) -> impl Iterator<Item = Vec<f64>> + 'a {
+    let area = window.area();
+    (0..bands).map(move |b| {
+        let mut out = vec![0.0; area];
+        with_samples!(samples, v => as_f64(&v[b * area..(b + 1) * area], codes, &mut out));
+        out
+    })
+}
+
 /// What reading the input once tells.
 pub struct Inspected {
     /// Its sums.
     pub account: Account,
+    /// What of it belongs to each part of the output.
+    pub local: Local,
     /// Its digest.
     pub sha256: String,
 }
@@ -147,17 +177,19 @@ pub struct Inspected {
 /// Reads the input once from end to end.
 pub fn inspect(
     source: &dyn Source,
-    onward: &Map,
+    back: &Map,
     target: (usize, usize),
     codes: &MissingCodes,
     rules: &Rules,
     progress: &dyn Progress,
 ) -> Result<Inspected> {
     let header = source.header();
+    let onward = back.invert()?;
+    let size = (header.grid.rows, header.grid.columns);
     let mut digest = Digest::new(header);
     let total = rules.values == Values::Total;
-    let mut account =
-        Account::of_input(onward, (header.grid.rows, header.grid.columns), target, header.bands, total);
+    let mut account = Account::of_input(&onward, size, target, header.bands, total);
+    let mut local = Local::new(back, size, target, total)?;
     let (mut done, total) = (0, header.grid.pixels() + target.0 * target.1);
     for window in reading_windows(header, rules.memory) {
         if progress.stopped() {
@@ -166,10 +198,13 @@ pub fn inspect(
         let samples = source.read(0..header.bands, &window)?;
         digest.feed(&window, &samples);
         account.add(&window, &samples, codes, None);
+        for values in bands_of(&samples, &window, header.bands, codes) {
+            local.add_before(&window.rows, &window.columns, &values);
+        }
         done += window.area();
         progress.advance(done as u64, total as u64);
     }
-    Ok(Inspected { account, sha256: digest.finish(header) })
+    Ok(Inspected { account, local, sha256: digest.finish(header) })
 }
 
 /// All that a ledger is made of.
@@ -186,6 +221,7 @@ pub struct Run<'a> {
     pub counts: Counts,
     pub near_gap: u64,
     pub shifted: Shifted,
+    pub local: &'a Local,
     pub costs: Costs,
     pub seconds: f64,
 }
@@ -244,18 +280,27 @@ impl Run<'_> {
                 overshoot: self.after.overshoot,
                 near_gap: self.near_gap,
                 moved_off_code: self.counts.moved_off_code,
+                limited: s.limited,
             },
-            flux: Flux {
-                before: finite(before.signal.value()),
-                after: finite(after.signal.value()),
-                left_frame: total_values.then(|| s.left_frame.value()),
-                filled_at_gaps: total_values.then(|| s.filled.value()),
-                lost_in_gaps: total_values.then(|| s.dropped.value()),
-                rounding: is_integer(self.to.sample_type).then_some(self.counts.rounding * area),
-                closure: closure.and_then(finite),
-                tolerance: rules.tolerance,
-                // A closure that cannot be had (no signal) has nothing to be off.
-                closed: rules.tolerance.map(|t| closure.is_none_or(|c| c.abs() <= t)),
+            // The sum of class codes or of angles tells nothing.
+            flux: if !matches!(rules.values, Values::Density | Values::Total) {
+                Flux::default()
+            } else {
+                Flux {
+                    before: finite(before.signal.value()),
+                    after: finite(after.signal.value()),
+                    left_frame: total_values.then(|| s.left_frame.value()),
+                    filled_at_gaps: total_values.then(|| s.filled.value()),
+                    lost_in_gaps: total_values.then(|| s.dropped.value()),
+                    limited: (rules.limit != Limit::None).then(|| s.moved.value() * area),
+                    beyond_limits: (rules.limit != Limit::None).then(|| s.beyond_limits.value()),
+                    rounding: is_integer(self.to.sample_type).then_some(self.counts.rounding * area),
+                    closure: closure.and_then(finite),
+                    tolerance: rules.tolerance,
+                    // A closure that cannot be had (no signal) has nothing to be off.
+                    closed: rules.tolerance.map(|t| closure.is_none_or(|c| c.abs() <= t)),
+                    local_closure: Some(self.local_closure()),
+                }
             },
             centroid: Centroid { before: self.before.centroid(), after: self.after.centroid() },
             displacement: Displacement {
@@ -294,6 +339,14 @@ impl Run<'_> {
             // A job is made of numbers, names and paths: it always has a JSON form.
             job: serde_json::to_value(self.job).unwrap_or_default(),
         }
+    }
+}
+
+impl Run<'_> {
+    fn local_closure(&self) -> LocalClosure {
+        let (rows, columns, values) = self.local.closure();
+        let (down, across) = self.local.step();
+        LocalClosure { rows, columns, cell: [down, across], values }
     }
 }
 

@@ -1,6 +1,7 @@
 //! A job: what a command becomes. It is run, written into the ledger, and replayed from there.
 
 mod account;
+mod compared;
 mod costs;
 mod describe;
 
@@ -12,7 +13,8 @@ use crate::map::Map;
 use crate::raster::{self, CELL, Digest, Header, MissingCodes, SampleType, Sink, Source, Window, check_free};
 use crate::report::Ledger;
 use crate::resample::{Counts, Engine, Extras, Outside, Plan, Rules, Shifted, Values};
-use account::{Account, inspect};
+use account::{Account, bands_of, inspect};
+use compared::take_back;
 use serde::{Deserialize, Serialize};
 use std::path::{Path, PathBuf};
 use std::time::Instant;
@@ -251,27 +253,6 @@ impl Ready<'_> {
         ))
     }
 
-    /// The frame of the output pixels that show something, and the way into it from the input. Border pixels whose centre lies
-    /// outside are missing; the strip of input under them must not count as signal that was lost. (Under a turned map the
-    /// strip is no frame, and stays.)
-    fn seen_frame(&self, onward: &Map, target: (usize, usize)) -> (Map, (usize, usize)) {
-        let Plan::RowsAndColumns { rows, columns, .. } = &self.plan else { return (*onward, target) };
-        if self.job.rules.outside == Outside::Extend || self.job.rules.values == Values::Total {
-            return (*onward, target);
-        }
-        let inside = |axis: &crate::resample::axis::Axis| {
-            let first = (0..axis.target).find(|o| axis.is_inside(*o as i64))?;
-            let last = (first..axis.target).rfind(|o| axis.is_inside(*o as i64))?;
-            Some(first..last + 1)
-        };
-        match (inside(rows), inside(columns)) {
-            (Some(r), Some(c)) => {
-                (onward.then(&Map::shift(-(r.start as f64), -(c.start as f64))), (r.len(), c.len()))
-            }
-            _ => (*onward, target),
-        }
-    }
-
     fn carry_out(
         self,
         mut sink: Option<Box<dyn Sink>>,
@@ -284,10 +265,9 @@ impl Ready<'_> {
         let from = source.header();
         let (size, target) =
             ((from.grid.rows, from.grid.columns), (self.header.grid.rows, self.header.grid.columns));
-        let onward = job.back.invert()?;
-        let (into_seen, seen) = self.seen_frame(&onward, target);
-        let before = inspect(source, &into_seen, seen, &self.codes, &job.rules, progress)?;
+        let mut before = inspect(source, &job.back, target, &self.codes, &job.rules, progress)?;
         self.check_missing(before.account.missing())?;
+        let gaps = before.account.missing() > 0;
         let engine = Engine {
             source,
             target,
@@ -312,6 +292,17 @@ impl Ready<'_> {
             }
             digest.feed(&block.window, &block.samples);
             after.add(&block.window, &block.samples, &out_codes, Some(&before.account));
+            let window = &block.window;
+            let values: Vec<Vec<f64>> =
+                bands_of(&block.samples, window, self.header.bands, &out_codes).collect();
+            for band in &values {
+                before.local.add_after(after.frame(), &window.rows, &window.columns, band);
+            }
+            if gaps || block.counts.missing > 0 {
+                let accounts = (&mut before.account, &mut after);
+                let back = &job.back;
+                take_back(source, &self.codes, back, window, &values, accounts, &mut before.local)?;
+            }
             counts.add(&block.counts);
             near_gap += block.near_gap;
             shifted.merge(&block.shifted);
@@ -343,6 +334,7 @@ impl Ready<'_> {
             counts,
             near_gap,
             shifted,
+            local: &before.local,
             costs,
             seconds: started.elapsed().as_secs_f64(),
         };

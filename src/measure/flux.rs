@@ -223,6 +223,14 @@ impl Balance {
         self.range = (self.range.0.min(other.range.0), self.range.1.max(other.range.1));
     }
 
+    /// Takes back signal (times area), its modulus and its first moments.
+    pub fn take(&mut self, signal: f64, modulus: f64, moments: (f64, f64)) {
+        self.signal.add(-signal);
+        self.modulus.add(-modulus);
+        self.row_moment.add(-moments.0);
+        self.column_moment.add(-moments.1);
+    }
+
     /// Centre of the signal (row, column) in input positions; `None` where the signal cancels.
     pub fn centroid(&self) -> Option<[f64; 2]> {
         let s = self.signal.value();

@@ -100,6 +100,9 @@ pub struct Pixels {
     pub near_gap: u64,
     /// Equal to the code for missing, and moved off it.
     pub moved_off_code: u64,
+    /// Beyond the range of the samples around, and held to it by `--limit`.
+    #[serde(default)]
+    pub limited: u64,
 }
 
 /// Signal x area in input pixels, over the region that both grids cover; of totals their sum, wherever they lie.
@@ -119,6 +122,12 @@ pub struct Flux {
     pub lost_in_gaps: Option<f64>,
     /// Sum of (stored - computed) x pixel area: the bias that rounding and saturation made.
     pub rounding: Option<f64>,
+    /// Sum of moduli of what `--limit` cut off, or of totals handed to neighbours; null without it.
+    #[serde(default)]
+    pub limited: Option<f64>,
+    /// Sum of moduli of what still exceeds the limits, since no neighbour had room; null without `--limit`.
+    #[serde(default)]
+    pub beyond_limits: Option<f64>,
     /// (after - before) / sum of |before|; null if that is 0. Of totals, after counts what left the frame and what gaps
     /// swallowed, but not what was filled in at them.
     pub closure: Option<f64>,
@@ -126,6 +135,22 @@ pub struct Flux {
     pub tolerance: Option<f64>,
     /// Whether |closure| keeps the bound; null if none was asked for.
     pub closed: Option<bool>,
+    /// The same on a coarse grid over the output.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub local_closure: Option<LocalClosure>,
+}
+
+/// Closure on a coarse grid: where signal went, not only how much.
+#[derive(Clone, Debug, Default, PartialEq, Serialize, Deserialize)]
+pub struct LocalClosure {
+    /// Coarse rows.
+    pub rows: usize,
+    /// Coarse columns.
+    pub columns: usize,
+    /// Output pixels of a coarse cell: rows, columns.
+    pub cell: [usize; 2],
+    /// (after - before) / sum of |before| of each cell, row by row; null where there is nothing to compare.
+    pub values: Vec<Option<f64>>,
 }
 
 /// Centre of the signal in input pixels (row, column), over the region that both grids cover.

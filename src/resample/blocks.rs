@@ -5,18 +5,19 @@
 use super::axis::{Axis, Way};
 use super::convert::{Counts, convert};
 use super::copy::copy;
+use super::limit::{self, Bounds};
 use super::passes::{Passes, Prepared, Span, nothing};
 use super::plan::{Plan, Size};
 use super::rows_and_columns::Plane;
 use super::rules::{Outside, Rules};
 use super::settle::{Resampled, Settled, Shifted, settle};
-use super::values::Values;
+use super::values::{Limit, Values};
 use crate::error::{Error, Result};
 use crate::kernel::SEGMENT;
 use crate::raster::{MissingCodes, Sample, SampleType, Samples, Source, Window};
 use crate::real::Real;
 use crate::with_samples;
-use ndarray::Array2;
+use ndarray::{Array2, s};
 use rayon::prelude::*;
 use std::ops::Range;
 
@@ -131,9 +132,9 @@ impl Engine<'_> {
                         rows: r..(r + height as i64).min(rows.end),
                         columns: c..(c + width as i64).min(columns.end),
                     };
-                    let Some(prepared) = passes.prepare(self, &span)? else { continue };
+                    let Some(prepared) = passes.prepare(self, &self.grown(&span))? else { continue };
                     for band in 0..self.source.header().bands {
-                        let mut settled = self.settled(&prepared, band);
+                        let mut settled = self.settled(&prepared, &span, band)?;
                         // What is missing there was dropped there.
                         settled
                             .values
@@ -157,7 +158,7 @@ impl Engine<'_> {
     ) -> Result<Block> {
         let signed = |r: &Range<usize>| r.start as i64..r.end as i64;
         let span = Span { rows: signed(rows), columns: signed(columns) };
-        let prepared = passes.prepare(self, &span)?;
+        let prepared = passes.prepare(self, &self.grown(&span))?;
         let mut block = Block {
             window: Window { rows: rows.clone(), columns: columns.clone() },
             samples: Samples::zeros(self.sample_type, 0),
@@ -168,7 +169,7 @@ impl Engine<'_> {
         };
         for band in 0..self.source.header().bands {
             let settled = match &prepared {
-                Some(prepared) => self.settled(prepared, band),
+                Some(prepared) => self.settled(prepared, &span, band)?,
                 None => Settled::of_nothing(nothing(self, &span)),
             };
             block.near_gap += settled.near_gap;
@@ -183,20 +184,62 @@ impl Engine<'_> {
         Ok(block)
     }
 
-    /// The settled values of a band.
-    fn settled<T: Real>(&self, prepared: &Prepared<T>, band: usize) -> Settled<T> {
-        let least = self.rules.min_coverage;
-        let Values::Cyclic(period) = self.rules.values else {
-            return settle(prepared.resampled(band, Plane::Values), least);
-        };
-        if matches!(self.plan, Plan::Copy { .. }) {
-            return settle(prepared.resampled(band, Plane::Values), least);
+    /// A block with the pixels around that have a say in it.
+    fn grown(&self, span: &Span) -> Span {
+        let halo =
+            if self.limits() { limit::halo(self.rules.values, &self.plan.back(), self.target) } else { 0 };
+        let grow = |r: &Range<i64>| r.start - halo..r.end + halo;
+        Span { rows: grow(&span.rows), columns: grow(&span.columns) }
+    }
+
+    /// Whether values are held to a range: a copy holds nothing else anyway.
+    fn limits(&self) -> bool {
+        self.rules.limit == Limit::Neighbours && !matches!(self.plan, Plan::Copy { .. })
+    }
+
+    /// The settled values of a band over `span`, of a block prepared with what is around it.
+    fn settled<T: Real>(&self, prepared: &Prepared<T>, span: &Span, band: usize) -> Result<Settled<T>> {
+        let around = self.grown(span);
+        let inner = (
+            (span.rows.start - around.rows.start) as usize..(span.rows.end - around.rows.start) as usize,
+            (span.columns.start - around.columns.start) as usize
+                ..(span.columns.end - around.columns.start) as usize,
+        );
+        let mut settled = self.settled_around(prepared, &inner, band);
+        if !self.limits() {
+            return Ok(settled);
         }
+        let bounds = Bounds::of(self, &self.plan.back(), &around, band)?;
+        let held = match self.rules.values {
+            Values::Total => bounds.hand_over(&mut settled.values, &inner),
+            _ => bounds.cut(&mut settled.values),
+        };
+        settled.shifted.moved = held.moved;
+        settled.shifted.limited = held.pixels;
+        settled.shifted.beyond_limits = held.beyond;
+        let crop = |a: Array2<T>| a.slice(s![inner.0.clone(), inner.1.clone()]).to_owned();
+        settled.share = settled.share.map(crop);
+        settled.values = crop(settled.values);
+        Ok(settled)
+    }
+
+    /// The settled values of a band; counts and sums are those of `inner`.
+    fn settled_around<T: Real>(
+        &self,
+        prepared: &Prepared<T>,
+        inner: &(Range<usize>, Range<usize>),
+        band: usize,
+    ) -> Settled<T> {
+        let least = self.rules.min_coverage;
+        let period = match self.rules.values {
+            Values::Cyclic(period) if !matches!(self.plan, Plan::Copy { .. }) => period,
+            _ => return settle(prepared.resampled(band, Plane::Values), least, inner),
+        };
         let Resampled { values: cosine, mask } = prepared.resampled(band, Plane::Cosine(period));
         let sine = prepared.resampled(band, Plane::Sine(period)).values;
         // Both go through the same weights; a gap's share divides out of the angle but not out of the resultant.
         let low = if self.extras.signed_angles { -0.5 * period } else { 0.0 };
-        let of_unit = settle(Resampled { values: length(&cosine, &sine), mask }, least);
+        let of_unit = settle(Resampled { values: length(&cosine, &sine), mask }, least, inner);
         let mut values = of_unit.values;
         ndarray::Zip::from(&mut values).and(&cosine).and(&sine).for_each(|v, c, s| {
             let resultant = v.to_f64();
@@ -290,7 +333,7 @@ impl Engine<'_> {
         let planes = if self.may_miss() { 4 } else { 1 };
         let out = height
             .saturating_mul(width)
-            .saturating_mul(self.sample_type.bytes() * (header.bands + 1) + planes * real);
+            .saturating_mul((self.sample_type.bytes() + 8) * (header.bands + 1) + planes * real);
         let (rows, columns, between) = match &self.plan {
             Plan::Copy { .. } => {
                 return height

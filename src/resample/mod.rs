@@ -9,6 +9,7 @@ mod copy;
 mod fourier;
 mod gather;
 mod least_squares;
+mod limit;
 mod majority;
 mod overlap;
 mod passes;
@@ -23,6 +24,7 @@ pub mod weights;
 
 pub use blocks::{Block, Engine, Extras};
 pub use convert::Counts;
+pub use overlap::{Cells, corners};
 pub use plan::{Plan, Size};
 
 /// The symbol of the prefilter that solves the least-squares equations of a B-spline kernel.

@@ -189,6 +189,25 @@ impl Plan {
         Ok((grid, Map::shift(low.0, low.1).then(&back)))
     }
 
+    /// The map from output to input positions that the plan carries out.
+    pub fn back(&self) -> Map {
+        let of = |swapped: bool, r: (f64, f64), c: (f64, f64)| {
+            // A swapped plan's rows read the input's columns.
+            if swapped { Map::affine([[0.0, c.0, c.1], [r.0, 0.0, r.1]]) } else { Map::axes(r, c) }
+        };
+        match self {
+            Plan::Copy { swapped, rows, columns } => {
+                let real = |a: &(i64, i64)| (a.0 as f64, a.1 as f64);
+                of(*swapped, real(rows), real(columns))
+            }
+            Plan::RowsAndColumns { swapped, rows, columns } => {
+                of(*swapped, (rows.step, rows.offset), (columns.step, columns.offset))
+            }
+            Plan::Gather { back, .. } | Plan::Overlap { back } | Plan::Majority { back } => *back,
+            Plan::Shear(shears) => shears.back,
+        }
+    }
+
     /// The name that the ledger tells.
     pub fn method(&self) -> &'static str {
         match self {

@@ -4,6 +4,7 @@ use crate::measure::Sum;
 use crate::real::Real;
 use ndarray::Array2;
 use ndarray::parallel::prelude::*;
+use std::ops::Range;
 
 /// The planes of a masked resampling, or the values alone.
 pub struct Resampled<T> {
@@ -34,8 +35,10 @@ pub struct Shifted {
     pub dropped: Sum,
     /// Sum of moduli of what `--limit` moved from cell to cell.
     pub moved: Sum,
-    /// Cells still beyond their limits.
-    pub beyond_limits: u64,
+    /// Pixels that `--limit` changed because they exceeded their range.
+    pub limited: u64,
+    /// Sum of moduli of what still exceeds it.
+    pub beyond_limits: Sum,
 }
 
 impl Shifted {
@@ -45,7 +48,8 @@ impl Shifted {
         self.filled.merge(&other.filled);
         self.dropped.merge(&other.dropped);
         self.moved.merge(&other.moved);
-        self.beyond_limits += other.beyond_limits;
+        self.limited += other.limited;
+        self.beyond_limits.merge(&other.beyond_limits);
     }
 }
 
@@ -84,7 +88,13 @@ impl<T: Real> Settled<T> {
 /// The value is S[m f] / S[m], with S the whole resampling and m the mask. It is missing where the kernel's own taps, or
 /// their moduli, find less than `min_coverage` of their weight, or S[m] less than half of that: a cardinal kernel
 /// that stands almost wholly on a gap would have to be guessed from its ripples.
-pub fn settle<T: Real>(resampled: Resampled<T>, min_coverage: f64) -> Settled<T> {
+///
+/// Counts and sums are those of the rows and columns of `inner`.
+pub fn settle<T: Real>(
+    resampled: Resampled<T>,
+    min_coverage: f64,
+    inner: &(Range<usize>, Range<usize>),
+) -> Settled<T> {
     let Resampled { mut values, mask } = resampled;
     let Some(mask) = mask else { return Settled::of_nothing(values) };
     const NEAR_GAP: f64 = 1e-3;
@@ -96,6 +106,7 @@ pub fn settle<T: Real>(resampled: Resampled<T>, min_coverage: f64) -> Settled<T>
         .map(|(r, mut line)| {
             let (mut near, mut shifted) = (0, Shifted::default());
             for (c, v) in line.iter_mut().enumerate() {
+                let counts = inner.0.contains(&r) && inner.1.contains(&c);
                 let whole = mask.whole[(r, c)].to_f64();
                 // Where no sample is missing the response is 1 but for rounding: the value stays as it is, to the bit.
                 if (whole - 1.0).abs() <= T::UNITY_SLACK {
@@ -109,12 +120,16 @@ pub fn settle<T: Real>(resampled: Resampled<T>, min_coverage: f64) -> Settled<T>
                 let moduli = mask.moduli.as_ref().map_or(taps, |m| m[(r, c)].to_f64());
                 if !(taps >= least && moduli >= least && whole >= 0.5 * least) {
                     *v = T::from_f64(f64::NAN);
-                    shifted.dropped.add(before);
+                    if counts {
+                        shifted.dropped.add(before);
+                    }
                     continue;
                 }
-                near += u64::from((whole - 1.0).abs() > NEAR_GAP);
                 *v = *v / mask.whole[(r, c)];
-                shifted.filled.add(v.to_f64() - before);
+                if counts {
+                    near += u64::from((whole - 1.0).abs() > NEAR_GAP);
+                    shifted.filled.add(v.to_f64() - before);
+                }
             }
             (near, shifted)
         })

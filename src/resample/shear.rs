@@ -35,6 +35,8 @@ pub struct Step {
 /// The three passes of one map with the extents of all their lines.
 #[derive(Clone, Debug, PartialEq)]
 pub struct Shears {
+    /// From output to input positions.
+    pub back: Map,
     /// How the input is looked at.
     pub view: View,
     /// Rows and columns of the view.
@@ -115,7 +117,19 @@ impl Shears {
         let (rows_at, row_cells) = transposed(&second, columns_at);
         let third: Vec<Range<i64>> =
             row_cells.iter().zip(rows_at..).map(|(cells, r)| steps[2].reached(cells, r as f64)).collect();
-        Ok(Shears { view, size, steps, first, columns_at, column_cells, second, rows_at, row_cells, third })
+        Ok(Shears {
+            back: *back,
+            view,
+            size,
+            steps,
+            first,
+            columns_at,
+            column_cells,
+            second,
+            rows_at,
+            row_cells,
+            third,
+        })
     }
 
     /// Rows and columns of the output's lattice that hold something.

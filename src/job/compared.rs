@@ -1,0 +1,100 @@
+//! What gaps keep from being compared: signal counts on both sides or on neither.
+//!
+//! The region that both rasters cover is where a sample that is there lies under an output pixel that is there. Sums over
+//! frames count more: input under missing output pixels, and the part of output pixels that lies over missing input.
+//! Both are taken back here, pixel by pixel by area.
+
+use super::account::{Account, as_f64};
+use crate::error::Result;
+use crate::map::Map;
+use crate::measure::Local;
+use crate::raster::{MissingCodes, Source, Window};
+use crate::resample::{Cells, corners};
+use crate::with_samples;
+use rayon::prelude::*;
+use std::ops::Range;
+
+/// One output pixel's part in neither sum.
+struct Part {
+    row: usize,
+    column: usize,
+    /// Input signal under it, its modulus, and its first moments, if the pixel is missing.
+    before: [f64; 4],
+    /// Its value times the area over missing input.
+    after: f64,
+}
+
+/// Takes back what does not count on both sides, for one block of all bands. `values` gives a band's rows, NaN = missing.
+///
+/// # Errors
+/// When the source cannot be read.
+pub(super) fn take_back(
+    source: &dyn Source,
+    codes: &MissingCodes,
+    back: &Map,
+    window: &Window,
+    values: &[Vec<f64>],
+    accounts: (&mut Account, &mut Account),
+    local: &mut Local,
+) -> Result<()> {
+    let header = source.header();
+    let (n, m) = (header.grid.rows, header.grid.columns);
+    let edges = |r: &Range<usize>| (r.start as f64 - 0.5, r.end as f64 - 0.5);
+    let b = back.bounds(edges(&window.rows), edges(&window.columns));
+    let reach = |(low, high): (f64, f64), n: usize| {
+        let range = low.floor().max(0.0) as usize..((high.ceil() + 1.0).clamp(0.0, n as f64) as usize);
+        (range.start < range.end).then_some(range)
+    };
+    let (Some(rows), Some(columns)) = (reach(b.rows, n), reach(b.columns, m)) else { return Ok(()) };
+    let under = Window { rows, columns };
+    let width = window.columns.len();
+    for (band, out) in values.iter().enumerate() {
+        let stored = source.read(band..band + 1, &under)?;
+        let mut samples = vec![0.0; under.area()];
+        with_samples!(&stored, v => as_f64(v, codes, &mut samples));
+        let gaps = samples.iter().any(|v| v.is_nan());
+        if !gaps && !out.iter().any(|v| v.is_nan()) {
+            continue;
+        }
+        let parts: Vec<Vec<Part>> = out
+            .par_chunks(width)
+            .zip(window.rows.clone())
+            .map_init(Cells::default, |cells, (line, row)| {
+                let mut found = Vec::new();
+                for (v, column) in line.iter().zip(window.columns.clone()) {
+                    if !gaps && !v.is_nan() {
+                        continue;
+                    }
+                    let image = corners(back, row as f64, column as f64);
+                    let mut part = Part { row, column, before: [0.0; 4], after: 0.0 };
+                    cells.under(&image, (n, m), |i, k, area| {
+                        let (i, k) = (i as usize, k as usize);
+                        let s =
+                            samples[(i - under.rows.start) * under.columns.len() + k - under.columns.start];
+                        if v.is_nan() && !s.is_nan() {
+                            let s = s * area;
+                            part.before[0] += s;
+                            part.before[1] += s.abs();
+                            part.before[2] += s * i as f64;
+                            part.before[3] += s * k as f64;
+                        } else if !v.is_nan() && s.is_nan() {
+                            part.after += v * area;
+                        }
+                    });
+                    if part.before[1] != 0.0 || part.after != 0.0 {
+                        found.push(part);
+                    }
+                }
+                found
+            })
+            .collect();
+        for part in parts.iter().flatten() {
+            let [signal, modulus, r, c] = part.before;
+            accounts.0.take(band, signal, modulus, (r, c));
+            let at = back.apply(part.row as f64, part.column as f64);
+            accounts.1.take(band, part.after, part.after.abs(), (part.after * at.0, part.after * at.1));
+            local.take(part.row, part.column, signal, modulus, part.after);
+        }
+    }
+    Ok(())
+}
