@@ -166,7 +166,7 @@ fn ledger_of(
     sink.write(&Window::whole(&grid), &Samples::F64(values)).unwrap();
     sink.finish().unwrap();
     let target = regauge::grid::Grid::new(target.0, target.1);
-    let job = regauge::job::Job { input, output, target, back, rules };
+    let job = regauge::job::Job { input, output, target, back, rules, sigma: None, mask: None };
     let ledger = job.run(&Default::default(), &()).unwrap();
     std::fs::remove_dir_all(&folder).unwrap();
     ledger

@@ -3,7 +3,7 @@
 use super::progress::Bar;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
-use crate::job::{Conduct, Job};
+use crate::job::{Conduct, Job, SigmaFrom};
 use crate::kernel::{Extension, Kernel};
 use crate::raster::SampleType;
 use crate::report::Ledger;
@@ -61,6 +61,44 @@ pub struct OutsideOption {
 impl OutsideOption {
     pub fn value(&self) -> Outside {
         if self.outside == "extend" { Outside::Extend } else { Outside::Missing }
+    }
+}
+
+/// What is known of the samples, and the planes wanted beside them.
+#[derive(Args, Clone)]
+#[command(next_help_heading = "Uncertainty and gaps")]
+pub struct Planes {
+    /// Standard uncertainty of the input: a raster file, a number, or poisson:GAIN,READ (electrons a count, electrons)
+    #[arg(long, value_name = "SIGMA")]
+    pub sigma: Vec<String>,
+    /// Where the standard uncertainty of the output goes
+    #[arg(long, value_name = "FILE")]
+    pub sigma_out: Option<PathBuf>,
+    /// Where the share of each pixel's weights that found samples goes
+    #[arg(long, value_name = "FILE")]
+    pub coverage: Option<PathBuf>,
+    /// Quality flags: samples with any of the bits (or any flag but 0) are missing; FILE or FILE:BITS, such as dq.tif:0x11
+    #[arg(long, value_name = "FILE[:BITS]")]
+    pub mask: Vec<String>,
+}
+
+impl Planes {
+    /// What is said of input `i` of `n`: once for all, or once for each.
+    pub fn of(&self, i: usize, n: usize) -> Result<(Option<SigmaFrom>, Option<String>)> {
+        let pick = |all: &[String], option: &str| -> Result<Option<String>> {
+            match all {
+                [] => Ok(None),
+                [one] => Ok(Some(one.clone())),
+                many if many.len() == n => Ok(Some(many[i].clone())),
+                many => Err(Error::usage(
+                    format!("{option} is given {} times for {n} inputs", many.len()),
+                    "give it once for all, or once for each input in order",
+                )),
+            }
+        };
+        let none = |s: &String| s != "-";
+        let sigma = pick(&self.sigma, "--sigma")?.filter(none).map(|s| s.parse::<SigmaFrom>()).transpose()?;
+        Ok((sigma, pick(&self.mask, "--mask")?.filter(none)))
     }
 }
 
@@ -185,15 +223,15 @@ pub fn command_line() -> Vec<String> {
 }
 
 /// Runs one job with a progress bar, notes and a summary.
-pub fn run_job(job: &Job, running: &Running, ledger: Option<PathBuf>) -> Result<Ledger> {
-    let conduct = Conduct { command: command_line(), ledger, overwrite: running.overwrite };
+pub fn run_job(job: &Job, running: &Running, conduct: &Conduct) -> Result<Ledger> {
     let bar = Bar::new(&job.output.display().to_string(), running.quiet);
-    let result = job.run(&conduct, &bar);
+    let result = job.run(conduct, &bar);
     bar.clear();
     let made = result?;
     if !running.quiet {
         say(&made.summary());
-        say(&[format!("ledger: {}", conduct.ledger.unwrap_or_else(|| job.ledger_path()).display())]);
+        let path = conduct.ledger.clone().unwrap_or_else(|| job.ledger_path());
+        say(&[format!("ledger: {}", path.display())]);
     }
     Ok(made)
 }

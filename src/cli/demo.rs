@@ -48,8 +48,11 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
             back: target.to(&year.grid)?,
             target: target.clone(),
             rules: Rules::default(),
+            sigma: None,
+            mask: None,
         };
-        let conduct = Conduct { command: super::common::command_line(), ledger: None, overwrite: true };
+        let conduct =
+            Conduct { command: super::common::command_line(), overwrite: true, ..Conduct::default() };
         ledgers.push(job.run(&conduct, &Bar::new(name, false))?);
     }
     let (first, second) = (read(&common.join("year1.tif"))?, read(&common.join("year2.tif"))?);

@@ -2,11 +2,11 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Resampling, Running, about, conclude, row_and_column, rules, run_job, say_notes,
-    warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, about, command_line, conclude, row_and_column, rules,
+    run_job, say_notes, warn_of_kernel,
 };
 use crate::error::{Error, Result};
-use crate::job::Job;
+use crate::job::{Conduct, Job};
 use crate::map::{Frame, Map, MapFile, Motion, moved};
 use crate::raster;
 use crate::resample::Plan;
@@ -57,6 +57,8 @@ pub struct Arguments {
     #[command(flatten)]
     outside: OutsideOption,
     #[command(flatten)]
+    planes: Planes,
+    #[command(flatten)]
     running: Running,
 }
 
@@ -92,7 +94,15 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         (target, back) = Plan::fit((grid.rows, grid.columns), target, back, &rules)?;
     }
     warn_of_kernel(&rules, back.as_axes().is_none(), a.running.quiet);
-    let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules };
-    let ledger = run_job(&job, &a.running, a.ledger.clone())?;
+    let (sigma, mask) = a.planes.of(0, 1)?;
+    let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules, sigma, mask };
+    let conduct = Conduct {
+        command: command_line(),
+        ledger: a.ledger.clone(),
+        overwrite: a.running.overwrite,
+        sigma_out: a.planes.sigma_out.clone(),
+        coverage: a.planes.coverage.clone(),
+    };
+    let ledger = run_job(&job, &a.running, &conduct)?;
     conclude(&[ledger], &a.running)
 }

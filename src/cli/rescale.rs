@@ -2,10 +2,11 @@
 
 use super::Outcome;
 use super::common::{
-    Resampling, Running, about, conclude, pair, rules, run_job, say_notes, size, warn_of_kernel,
+    Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say_notes, size,
+    warn_of_kernel,
 };
 use crate::error::Result;
-use crate::job::Job;
+use crate::job::{Conduct, Job};
 use crate::map::{Anchor, Rescale, rescaled};
 use crate::raster;
 use crate::resample::Outside;
@@ -48,6 +49,8 @@ pub struct Arguments {
     #[command(flatten)]
     resampling: Resampling,
     #[command(flatten)]
+    planes: Planes,
+    #[command(flatten)]
     running: Running,
 }
 
@@ -65,7 +68,15 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     };
     let anchor = if a.anchor == "centre" { Anchor::Centre } else { Anchor::Edge };
     let (target, back) = rescaled(&header.grid, how, anchor).map_err(|e| about(&a.input, e))?;
-    let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules };
-    let ledger = run_job(&job, &a.running, a.ledger.clone())?;
+    let (sigma, mask) = a.planes.of(0, 1)?;
+    let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules, sigma, mask };
+    let conduct = Conduct {
+        command: command_line(),
+        ledger: a.ledger.clone(),
+        overwrite: a.running.overwrite,
+        sigma_out: a.planes.sigma_out.clone(),
+        coverage: a.planes.coverage.clone(),
+    };
+    let ledger = run_job(&job, &a.running, &conduct)?;
     conclude(&[ledger], &a.running)
 }

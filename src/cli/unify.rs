@@ -2,8 +2,8 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say, say_notes,
-    warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say,
+    say_notes, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::grid::{Grid, Span, span};
@@ -14,7 +14,7 @@ use clap::Args;
 use std::collections::HashMap;
 use std::path::{Path, PathBuf};
 
-/// Several rasters onto one grid, each under its own name in a folder.
+/// Several rasters onto one grid, each under its own name in a folder. --sigma-out and --coverage name folders as well.
 #[derive(Args)]
 #[command(
     group = clap::ArgGroup::new("grid").required(true).args(["onto", "span"]),
@@ -48,6 +48,8 @@ pub struct Arguments {
     resampling: Resampling,
     #[command(flatten)]
     outside: OutsideOption,
+    #[command(flatten)]
+    planes: Planes,
     #[command(flatten)]
     running: Running,
 }
@@ -85,15 +87,32 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
             ));
         }
         warn_of_kernel(&rules, back.as_axes().is_none(), a.running.quiet);
-        jobs.push(Job { input: path.clone(), output, target: target.clone(), back, rules: rules.clone() });
+        let (sigma, mask) = a.planes.of(jobs.len(), a.inputs.len())?;
+        let conduct = Conduct {
+            command: command_line(),
+            ledger: None,
+            overwrite: a.running.overwrite,
+            sigma_out: beside(a.planes.sigma_out.as_deref(), &output)?,
+            coverage: beside(a.planes.coverage.as_deref(), &output)?,
+        };
+        let job = Job {
+            input: path.clone(),
+            output,
+            target: target.clone(),
+            back,
+            rules: rules.clone(),
+            sigma,
+            mask,
+        };
+        jobs.push((job, conduct));
     }
     std::fs::create_dir_all(&a.out).map_err(|e| Error::io(&a.out, "making the folder", e))?;
     // All that can be refused is refused before the first raster is touched.
-    let conduct = Conduct { command: command_line(), ledger: None, overwrite: a.running.overwrite };
-    for job in &jobs {
-        job.check(&conduct)?;
+    for (job, conduct) in &jobs {
+        job.check(conduct)?;
     }
-    let ledgers = jobs.iter().map(|job| run_job(job, &a.running, None)).collect::<Result<Vec<_>>>()?;
+    let ledgers =
+        jobs.iter().map(|(job, conduct)| run_job(job, &a.running, conduct)).collect::<Result<Vec<_>>>()?;
     conclude(&ledgers, &a.running)
 }
 
@@ -207,6 +226,13 @@ fn way_back(path: &Path, grid: &Grid, file: Option<&MapFile>, target: &Grid, nam
         _ => Map::IDENTITY,
     };
     Ok(onto_reference.then(&map.invert()?).then(&moving))
+}
+
+/// The output's name in the folder of a plane, which is made if needed.
+fn beside(folder: Option<&Path>, output: &Path) -> Result<Option<PathBuf>> {
+    let Some(folder) = folder else { return Ok(None) };
+    std::fs::create_dir_all(folder).map_err(|e| Error::io(folder, "making the folder", e))?;
+    Ok(output.file_name().map(|name| folder.join(name)))
 }
 
 /// The input's own name; with .tif where its format is only read.

@@ -67,7 +67,7 @@ pub(super) fn take_back(
                     }
                     let image = corners(back, row as f64, column as f64);
                     let mut part = Part { row, column, before: [0.0; 4], after: 0.0 };
-                    cells.under(&image, (n, m), |i, k, area| {
+                    cells.under(&image, Some((n, m)), |i, k, area| {
                         let (i, k) = (i as usize, k as usize);
                         let s =
                             samples[(i - under.rows.start) * under.columns.len() + k - under.columns.start];

@@ -4,17 +4,23 @@ mod account;
 mod compared;
 mod costs;
 mod describe;
+mod planes;
 
 pub use describe::{BandStatistics, describe};
+pub use planes::SigmaFrom;
 
 use crate::error::{Error, Result};
 use crate::grid::Grid;
 use crate::map::Map;
-use crate::raster::{self, CELL, Digest, Header, MissingCodes, SampleType, Sink, Source, Window, check_free};
+use crate::raster::{
+    self, CELL, Digest, Flags, Header, Masked, MissingCodes, SampleType, Sink, Source, Window, check_free,
+    split_bits,
+};
 use crate::report::Ledger;
-use crate::resample::{Counts, Engine, Extras, Outside, Plan, Rules, Shifted, Values};
+use crate::resample::{Counts, Engine, Extras, Noise, Outside, Plan, Rules, Shifted, Values};
 use account::{Account, bands_of, inspect};
 use compared::take_back;
+use planes::Planes;
 use serde::{Deserialize, Serialize};
 use std::path::{Path, PathBuf};
 use std::time::Instant;
@@ -32,6 +38,12 @@ pub struct Job {
     pub back: Map,
     /// Kernel, extension and the other choices.
     pub rules: Rules,
+    /// What is known of the noise of the samples.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub sigma: Option<SigmaFrom>,
+    /// A raster of flags, `FILE` or `FILE:BITS`: samples with one of the bits (or any but 0) are missing.
+    #[serde(default, skip_serializing_if = "Option::is_none")]
+    pub mask: Option<String>,
 }
 
 /// What a run may do beside its result.
@@ -43,6 +55,10 @@ pub struct Conduct {
     pub ledger: Option<PathBuf>,
     /// Whether an output that exists is replaced.
     pub overwrite: bool,
+    /// Where the standard uncertainty of the outputs goes; needs [`Job::sigma`].
+    pub sigma_out: Option<PathBuf>,
+    /// Where the share of each output's weights that found samples goes.
+    pub coverage: Option<PathBuf>,
 }
 
 /// Told how the work goes on; may stop it.
@@ -68,6 +84,7 @@ struct Ready<'a> {
     header: Header,
     codes: MissingCodes,
     fill: Option<f64>,
+    noise: Option<Noise>,
 }
 
 impl Job {
@@ -98,7 +115,8 @@ impl Job {
             ready.check_output(conduct)?;
             ready.check_missing(0)?;
             let sink = raster::create(&self.output, &ready.header, conduct.overwrite)?;
-            let ledger = ready.carry_out(Some(sink), &conduct.command, progress)?;
+            let planes = Planes::create(&ready.header, conduct)?;
+            let ledger = ready.carry_out(Some((sink, planes)), &conduct.command, progress)?;
             ledger.write(&conduct.ledger.clone().unwrap_or_else(|| self.ledger_path()))?;
             Ok(ledger)
         })
@@ -127,7 +145,7 @@ impl Job {
     fn ready(&self) -> Result<Ready<'_>> {
         self.rules.check()?;
         self.target.check()?;
-        let source = raster::open(&self.input)?;
+        let source = open_masked(&self.input, self.mask.as_deref(), self.rules.missing)?;
         let from = source.header();
         check_tables(from, &self.target, self.rules.memory)?;
         let size = (from.grid.rows, from.grid.columns);
@@ -146,8 +164,28 @@ impl Job {
             ));
         }
         let header = output_header(from, &self.target, sample_type, fill);
-        Ok(Ready { job: self, plan, header, codes: MissingCodes { codes }, fill, source })
+        if self.sigma.is_some() && matches!(self.rules.values, Values::Label | Values::Cyclic(_)) {
+            return Err(Error::usage(
+                format!("--sigma has no meaning for --values {}", self.rules.values),
+                "leave --sigma out",
+            ));
+        }
+        let noise = self.sigma.as_ref().map(|s| s.open(from)).transpose()?;
+        Ok(Ready { job: self, plan, header, codes: MissingCodes { codes }, fill, source, noise })
     }
+}
+
+/// Opens a raster, with a mask of flags where one is given.
+///
+/// # Errors
+/// When a file cannot be read, or the mask does not fit.
+pub fn open_masked(path: &Path, mask: Option<&str>, missing: Option<f64>) -> Result<Box<dyn Source>> {
+    let source = raster::open(path)?;
+    let Some(text) = mask else { return Ok(source) };
+    let (file, flags) = if Path::new(text).exists() { (text, Flags::Any) } else { split_bits(text) };
+    let mask = raster::open(Path::new(file))?;
+    let codes: Vec<f64> = missing.into_iter().collect();
+    Ok(Box::new(Masked::new(source, mask, flags, &codes, file)?))
 }
 
 /// Refuses rasters whose tables alone (digests and places of tiles, shares of rows and columns) would not fit the memory.
@@ -221,6 +259,24 @@ impl Ready<'_> {
                 "name another ledger",
             ));
         }
+        let beside: Vec<&PathBuf> = [&conduct.sigma_out, &conduct.coverage].into_iter().flatten().collect();
+        if conduct.sigma_out.is_some() && self.noise.is_none() {
+            return Err(Error::usage(
+                "--sigma-out needs to know the noise of the input",
+                "give --sigma FILE, a number, or poisson:GAIN,READ",
+            ));
+        }
+        for (i, path) in beside.iter().enumerate() {
+            let taken = [&job.output, &ledger].contains(path) || beside[..i].contains(path);
+            if taken || is_same_file(&job.input, path) {
+                return Err(Error::usage(
+                    format!("{} is named for two things", path.display()),
+                    "give each file its own name",
+                ));
+            }
+            check_free(path, conduct.overwrite)?;
+            Planes::check(path, &self.header)?;
+        }
         check_free(&job.output, conduct.overwrite)?;
         check_free(&ledger, conduct.overwrite)?;
         raster::check_writable(&job.output, &self.header)
@@ -255,7 +311,7 @@ impl Ready<'_> {
 
     fn carry_out(
         self,
-        mut sink: Option<Box<dyn Sink>>,
+        mut sink: Option<(Box<dyn Sink>, Planes)>,
         command: &[String],
         progress: &dyn Progress,
     ) -> Result<Ledger> {
@@ -276,9 +332,13 @@ impl Ready<'_> {
             codes: self.codes.clone(),
             sample_type: self.header.sample_type,
             fill: self.fill,
-            extras: Extras { signed_angles: before.account.has_negative(), ..Extras::default() },
+            extras: Extras {
+                signed_angles: before.account.has_negative(),
+                coverage: sink.as_ref().is_some_and(|s| s.1.wants_coverage()),
+                noise: sink.as_ref().filter(|s| s.1.wants_sigma()).and_then(|_| self.noise.clone()),
+            },
         };
-        let alignment = sink.as_ref().map_or(1, |s| s.alignment()).max(CELL);
+        let alignment = sink.as_ref().map_or(1, |s| s.0.alignment().max(s.1.alignment())).max(CELL);
         let mut digest = Digest::new(&self.header);
         let total_values = job.rules.values == Values::Total;
         let mut after = Account::new(&job.back, target, size, self.header.bands, total_values);
@@ -306,8 +366,9 @@ impl Ready<'_> {
             counts.add(&block.counts);
             near_gap += block.near_gap;
             shifted.merge(&block.shifted);
-            if let Some(sink) = &mut sink {
+            if let Some((sink, planes)) = &mut sink {
                 sink.write(&block.window, &block.samples)?;
+                planes.write(&block)?;
             }
             done += block.window.area() as u64;
             progress.advance(done, total);
@@ -317,7 +378,8 @@ impl Ready<'_> {
         if progress.stopped() {
             return Err(Error::Stopped);
         }
-        if let Some(sink) = sink {
+        if let Some((sink, planes)) = sink {
+            planes.finish()?;
             sink.finish()?;
         }
         let digests = (before.sha256.clone(), digest.finish(&self.header));

@@ -4,6 +4,7 @@
 
 mod beside;
 mod digest;
+mod masked;
 mod memory;
 mod npy;
 mod picture;
@@ -14,6 +15,7 @@ mod tiff;
 
 pub use beside::check_free;
 pub use digest::{CELL, Digest, digest};
+pub use masked::{Flags, Masked, codes_of, split_bits};
 pub use memory::{Collected, MemorySink, Raster};
 pub use sample::{MissingCodes, Sample};
 pub use storage::{Format, Storage};

@@ -12,6 +12,7 @@ use super::rows_and_columns::Plane;
 use super::rules::{Outside, Rules};
 use super::settle::{Resampled, Settled, Shifted, settle};
 use super::values::{Limit, Values};
+use super::variance::Noise;
 use crate::error::{Error, Result};
 use crate::kernel::SEGMENT;
 use crate::raster::{MissingCodes, Sample, SampleType, Samples, Source, Window};
@@ -46,6 +47,8 @@ pub struct Engine<'a> {
 pub struct Extras {
     /// The share of each pixel's weights that found samples.
     pub coverage: bool,
+    /// The noise of the samples, where the standard uncertainty of the outputs is wanted.
+    pub noise: Option<Noise>,
     /// Angles are told from minus half a period to half a period, as in a source that has negative ones; else from 0 to the
     /// period.
     pub signed_angles: bool,
@@ -65,6 +68,8 @@ pub struct Block {
     pub shifted: Shifted,
     /// The share of each pixel's weights that found samples, band by band, if wanted.
     pub coverage: Option<Vec<f32>>,
+    /// The standard uncertainty of each pixel, band by band, NaN where it is missing or unknown, if wanted.
+    pub sigma: Option<Vec<f64>>,
 }
 
 impl Engine<'_> {
@@ -97,7 +102,9 @@ impl Engine<'_> {
                 let rows = r..(r + height).min(self.target.0);
                 let columns = c..(c + width).min(self.target.1);
                 let block = match (&self.plan, &passes64, &passes32) {
-                    (Plan::Copy { swapped, rows: a, columns: b }, _, _) if self.copies_bits() => {
+                    (Plan::Copy { swapped, rows: a, columns: b }, _, _)
+                        if self.copies_bits() && self.extras.noise.is_none() =>
+                    {
                         self.copied(*swapped, (*a, *b), &rows, &columns)?
                     }
                     (_, Some(p), _) => self.block(p, &rows, &columns)?,
@@ -166,6 +173,7 @@ impl Engine<'_> {
             near_gap: 0,
             shifted: Shifted::default(),
             coverage: self.extras.coverage.then(Vec::new),
+            sigma: self.extras.noise.is_some().then(Vec::new),
         };
         for band in 0..self.source.header().bands {
             let settled = match &prepared {
@@ -177,11 +185,46 @@ impl Engine<'_> {
             if let Some(coverage) = &mut block.coverage {
                 coverage.extend(settled.coverage());
             }
+            if let (Some(sigma), Some(noise)) = (&mut block.sigma, &self.extras.noise) {
+                sigma.extend(match &prepared {
+                    Some(prepared) => {
+                        let variance = prepared.variance(noise, band)?;
+                        self.standard_uncertainty(&variance, &settled, &span)
+                    }
+                    None => vec![f64::NAN; settled.values.len()],
+                });
+            }
             let (converted, counts) = convert(settled.values.view(), self.sample_type, self.fill);
             block.counts.add(&counts);
             block.samples.append(converted)?;
         }
         Ok(block)
+    }
+
+    /// The roots of a block's variances, cut to `span` and divided at gaps as the values were.
+    fn standard_uncertainty<T: Real>(
+        &self,
+        variance: &Array2<f64>,
+        settled: &Settled<T>,
+        span: &Span,
+    ) -> Vec<f64> {
+        let around = self.grown(span);
+        let (top, left) = (
+            (span.rows.start - around.rows.start) as usize,
+            (span.columns.start - around.columns.start) as usize,
+        );
+        settled
+            .values
+            .indexed_iter()
+            .map(|((r, c), v)| {
+                let variance = variance[(r + top, c + left)];
+                if v.to_f64().is_nan() || !variance.is_finite() {
+                    return f64::NAN;
+                }
+                let divisor = settled.divisor.as_ref().map_or(1.0, |d| d[(r, c)].to_f64());
+                variance.max(0.0).sqrt() / divisor.abs()
+            })
+            .collect()
     }
 
     /// A block with the pixels around that have a say in it.
@@ -219,6 +262,7 @@ impl Engine<'_> {
         settled.shifted.beyond_limits = held.beyond;
         let crop = |a: Array2<T>| a.slice(s![inner.0.clone(), inner.1.clone()]).to_owned();
         settled.share = settled.share.map(crop);
+        settled.divisor = settled.divisor.map(crop);
         settled.values = crop(settled.values);
         Ok(settled)
     }
@@ -278,6 +322,7 @@ impl Engine<'_> {
             near_gap: 0,
             shifted: Shifted::default(),
             coverage,
+            sigma: None,
         })
     }
 
@@ -334,6 +379,10 @@ impl Engine<'_> {
         let out = height
             .saturating_mul(width)
             .saturating_mul((self.sample_type.bytes() + 8) * (header.bands + 1) + planes * real);
+        // Variances, and the samples' noise that they are made of.
+        let noise = if self.extras.noise.is_some() { 24 } else { 0 };
+        let out = out.saturating_add(height.saturating_mul(width).saturating_mul(noise + 8 * header.bands));
+        let stored = stored + noise;
         let (rows, columns, between) = match &self.plan {
             Plan::Copy { .. } => {
                 return height

@@ -35,6 +35,14 @@ pub struct Stretch<T> {
     banded: Banded<T>,
 }
 
+impl<T: Real> Stretch<T> {
+    /// Weights of their own, on the samples `reach`.
+    pub fn of_weights(wanted: Range<i64>, reach: Range<i64>, banded: Banded<T>) -> Self {
+        let reach = Reach { outputs: wanted.clone(), taps: reach.clone(), samples: reach };
+        Stretch { wanted, reach, banded }
+    }
+}
+
 /// Whether the whole chain is applied or only the weights, without prefilters.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum Part {

@@ -28,6 +28,26 @@ pub struct Look {
     pub local: Option<(f64, f64)>,
 }
 
+impl Look {
+    /// Where an output pixel looks among the nodes; `None` if it looks outside. Sets the weighers to the stretch of the place.
+    #[inline(always)]
+    pub fn position(&self, row: f64, column: f64, weighers: &mut (Weigher, Weigher)) -> Option<(f64, f64)> {
+        let (x, y) = self.back.apply(row, column);
+        if !(x.abs() < 1e15 && y.abs() < 1e15) {
+            return None;
+        }
+        if self.outside == Outside::Missing && !(is_inside(x, self.source.0) && is_inside(y, self.source.1)) {
+            return None;
+        }
+        if let Some(most) = self.local {
+            let (a, b) = stretch_at(&self.back, row, column);
+            weighers.0.set_stretch(a.min(most.0));
+            weighers.1.set_stretch(b.min(most.1));
+        }
+        Some(if self.lattice == Map::IDENTITY { (x, y) } else { self.lattice.apply(x, y) })
+    }
+}
+
 /// A plane of samples or coefficients over extended indices.
 pub struct Nodes<'a, T> {
     /// Rows x columns.
@@ -93,19 +113,7 @@ impl<T: Real> Local<T> {
     }
 
     fn pixel(&mut self, look: &Look, plane: &Nodes<T>, by: By, row: f64, column: f64, out: &mut T) {
-        let (x, y) = look.back.apply(row, column);
-        if !(x.abs() < 1e15 && y.abs() < 1e15) {
-            return;
-        }
-        if look.outside == Outside::Missing && !(is_inside(x, look.source.0) && is_inside(y, look.source.1)) {
-            return;
-        }
-        if let Some(most) = look.local {
-            let (a, b) = stretch_at(&look.back, row, column);
-            self.weighers.0.set_stretch(a.min(most.0));
-            self.weighers.1.set_stretch(b.min(most.1));
-        }
-        let (x, y) = if look.lattice == Map::IDENTITY { (x, y) } else { look.lattice.apply(x, y) };
+        let Some((x, y)) = look.position(row, column, &mut self.weighers) else { return };
         let top = self.weighers.0.weights(x, &mut self.exact.0) - plane.origin.0;
         let left = self.weighers.1.weights(y, &mut self.exact.1) - plane.origin.1;
         if self.exact.0.is_empty() || self.exact.1.is_empty() {

@@ -6,6 +6,7 @@ mod chain;
 mod conserve;
 mod convert;
 mod copy;
+mod effective;
 mod fourier;
 mod gather;
 mod least_squares;
@@ -20,6 +21,7 @@ mod rules;
 mod settle;
 mod shear;
 mod values;
+mod variance;
 pub mod weights;
 
 pub use blocks::{Block, Engine, Extras};
@@ -34,3 +36,4 @@ pub fn gram_symbol(kernel: &crate::kernel::Kernel) -> Vec<f64> {
 pub use rules::{Outside, Reduce, Rules};
 pub use settle::Shifted;
 pub use values::{Limit, Values};
+pub use variance::Noise;

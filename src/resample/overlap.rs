@@ -74,24 +74,22 @@ pub struct Cells {
 }
 
 impl Cells {
-    /// Calls `each` with row, column and covered area of every pixel of a raster of `size` that a convex polygon covers.
-    pub fn under(
-        &mut self,
-        polygon: &[(f64, f64); 4],
-        size: (usize, usize),
-        mut each: impl FnMut(i64, i64, f64),
-    ) {
+    /// Calls `each` with row, column and covered area of every pixel that a convex polygon covers, of those within `limits`.
+    pub fn under(&mut self, polygon: &[(f64, f64); 4], limits: Limits, mut each: impl FnMut(i64, i64, f64)) {
         let [a, b, c, d] = polygon;
         // Upright images need no clipping.
         if a.0 == b.0 && c.0 == d.0 && a.1 == d.1 && b.1 == c.1 {
-            let part = |low: f64, high: f64, n: usize| {
+            let part = |low: f64, high: f64, n: Option<usize>| {
                 let (low, high) = (low.min(high) + 0.5, low.max(high) + 0.5);
-                let first = low.floor().max(0.0) as i64;
-                let last = high.ceil().min(n as f64) as i64;
+                let (mut first, mut last) =
+                    (low.floor().clamp(-9e15, 9e15) as i64, high.ceil().clamp(-9e15, 9e15) as i64);
+                if let Some(n) = n {
+                    (first, last) = (first.max(0), last.min(n as i64));
+                }
                 (first..last).map(move |i| (i, (high.min(i as f64 + 1.0) - low.max(i as f64)).max(0.0)))
             };
-            for (i, down) in part(a.0, c.0, size.0) {
-                for (k, across) in part(a.1, c.1, size.1) {
+            for (i, down) in part(a.0, c.0, limits.map(|l| l.0)) {
+                for (k, across) in part(a.1, c.1, limits.map(|l| l.1)) {
                     if down * across > 0.0 {
                         each(i, k, down * across);
                     }
@@ -99,7 +97,7 @@ impl Cells {
             }
             return;
         }
-        self.clip.cells(polygon, Some(size), &mut self.found);
+        self.clip.cells(polygon, limits, &mut self.found);
         self.found.iter().for_each(|(i, k, area)| each(*i, *k, *area));
     }
 }

@@ -13,10 +13,12 @@ use super::rules::Outside;
 use super::settle::{Mask, Resampled};
 use super::shear::Shears;
 use super::values::Values;
+use super::variance::{self, Noise, Variance};
 use super::weights::Weigher;
 use crate::error::Result;
 use crate::kernel::{Extension, Prefilter};
 use crate::map::Map;
+use crate::raster::{Samples, Source, Window};
 use crate::real::Real;
 use ndarray::Array2;
 use std::ops::Range;
@@ -201,6 +203,47 @@ impl<T: Real> Prepared<'_, T> {
         Resampled { values, mask }
     }
 
+    /// The variance of a band's outputs before gaps are divided out.
+    ///
+    /// # Errors
+    /// When the source or the sigma plane cannot be read.
+    pub fn variance(&self, noise: &Noise, band: usize) -> Result<Array2<f64>> {
+        let engine = self.engine;
+        let source = Variance::new(engine.source, &engine.codes, noise, band);
+        let by = (&engine.rules.kernel, engine.rules.edges());
+        let total = engine.rules.values == Values::Total;
+        match self.passes {
+            Passes::Axes { swapped, rows, columns } => {
+                variance::of_axes(&source, (&rows.axis, &columns.axis), *swapped, by, &self.span)
+            }
+            Passes::Gather { rows, columns, look, .. } => {
+                let Some((r, c)) = &self.stretches else { return Ok(Array2::zeros(self.span.size())) };
+                let nodes = (&r.wanted, &c.wanted);
+                variance::of_gather(&source, look, (&rows.axis, &columns.axis), by, nodes, &self.span)
+            }
+            Passes::Overlap { back, .. } | Passes::Majority { back, .. } => {
+                let inside = total || by.1 == Extension::Open;
+                variance::of_overlap(&source, back, by.1, (inside, total), &self.span)
+            }
+            Passes::Shear { shears, .. } => {
+                let Some((rows, columns)) = shears.window(by.0, &self.span.rows, &self.span.columns) else {
+                    return Ok(Array2::zeros(self.span.size()));
+                };
+                let window = Window { rows, columns };
+                let Samples::F64(values) = source.read(0..1, &window)? else {
+                    return Ok(Array2::zeros(self.span.size()));
+                };
+                let size = engine.source_size();
+                let input = |r: usize, c: usize| {
+                    let (r, c) = shears.view.of(r, c, size);
+                    let at = (r - window.rows.start) * window.columns.len() + c - window.columns.start;
+                    values.get(at).copied().unwrap_or(0.0)
+                };
+                Ok(shears.variance(by.0, &self.span.rows, &self.span.columns, input))
+            }
+        }
+    }
+
     fn axes_of<'b>(&'b self, rows: &'b Chain<T>, columns: &'b Chain<T>) -> Option<Axes<'b, T>> {
         let (r, c) = self.stretches.as_ref()?;
         Some(Axes { rows: (rows, r), columns: (columns, c) })
@@ -339,13 +382,9 @@ impl<T: Real> Prepared<'_, T> {
                 what.load(&self.patch, band, r, line, &mut mask);
             }
         }
-        let view = &shears.view;
         let size = self.engine.source_size();
-        let (n, m) = if view.swapped { (size.1, size.0) } else { size };
         let input = |r: usize, c: usize| {
-            let r = if view.flip_rows { n - 1 - r } else { r };
-            let c = if view.flip_columns { m - 1 - c } else { c };
-            let (r, c) = if view.swapped { (c, r) } else { (r, c) };
+            let (r, c) = shears.view.of(r, c, size);
             let at = (r as i64 - self.origin.0, c as i64 - self.origin.1);
             plane.get((at.0 as usize, at.1 as usize)).copied().unwrap_or(0.0)
         };

@@ -63,12 +63,14 @@ pub struct Settled<T> {
     pub shifted: Shifted,
     /// The share of the weights that found samples; `None` where none is missing.
     pub(super) share: Option<Array2<T>>,
+    /// What the values were divided by at gaps; `None` where none is missing.
+    pub(super) divisor: Option<Array2<T>>,
 }
 
 impl<T: Real> Settled<T> {
     /// A block of which nothing is seen.
     pub fn of_nothing(values: Array2<T>) -> Self {
-        Settled { values, near_gap: 0, shifted: Shifted::default(), share: None }
+        Settled { values, near_gap: 0, shifted: Shifted::default(), share: None, divisor: None }
     }
 
     /// The share of each pixel's weights that found samples: 1 where none is missing, 0 where nothing is.
@@ -139,5 +141,11 @@ pub fn settle<T: Real>(
         near_gap += near;
         shifted.merge(part);
     }
-    Settled { values, near_gap, shifted, share: Some(mask.taps.unwrap_or(mask.whole)) }
+    Settled {
+        values,
+        near_gap,
+        shifted,
+        share: Some(mask.taps.unwrap_or_else(|| mask.whole.clone())),
+        divisor: Some(mask.whole),
+    }
 }

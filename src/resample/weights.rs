@@ -265,14 +265,28 @@ pub struct Banded<T> {
 impl<T: Real> Banded<T> {
     /// Builds the weights of the outputs in `range`.
     pub fn build(axis: &Axis, weigher: &Weigher, range: Range<i64>) -> Self {
+        Banded::from_rows(range, |o, w| weigher.of_output(axis, o, w))
+    }
+
+    /// From a function that fills in the weights of an output and tells the first sample.
+    pub fn from_rows(range: Range<i64>, mut row: impl FnMut(i64, &mut Vec<f64>) -> i64) -> Self {
         let mut banded = Banded { start: Vec::new(), at: vec![0], weights: Vec::new() };
         let mut w = Vec::new();
         for o in range {
-            banded.start.push(weigher.of_output(axis, o, &mut w));
+            banded.start.push(row(o, &mut w));
             banded.weights.extend(w.iter().map(|v| T::from_f64(*v)));
             banded.at.push(banded.weights.len());
         }
         banded
+    }
+
+    /// The samples that weights fall on; `None` if there are none.
+    pub fn reach(&self) -> Option<Range<i64>> {
+        (0..self.len())
+            .map(|i| self.row(i))
+            .filter(|(_, w)| !w.is_empty())
+            .map(|(first, w)| first..first + w.len() as i64)
+            .reduce(|a, b| a.start.min(b.start)..a.end.max(b.end))
     }
 
     /// First sample and weights of output `i` of the range.

@@ -1,0 +1,178 @@
+//! What a job knows of noise, and the planes that it writes beside its output: sigma and coverage.
+
+use super::Conduct;
+use crate::error::{Error, Result};
+use crate::raster::{self, Header, MissingCodes, SampleType, Samples, Sink};
+use crate::resample::{Block, Noise};
+use serde::{Deserialize, Deserializer, Serialize, Serializer};
+use std::path::{Path, PathBuf};
+
+/// Where the standard uncertainty of samples comes from: a number, `poisson:GAIN,READ`, or a raster file.
+#[derive(Clone, Debug, PartialEq)]
+pub enum SigmaFrom {
+    /// The same everywhere, in the unit of the samples.
+    Number(f64),
+    /// Electrons a count, and electrons of reading noise: variance max(v, 0) / gain + (read / gain)^2.
+    Poisson(f64, f64),
+    /// A raster of the input's size, with one band for all or one for each.
+    File(PathBuf),
+}
+
+impl std::fmt::Display for SigmaFrom {
+    fn fmt(&self, f: &mut std::fmt::Formatter<'_>) -> std::fmt::Result {
+        match self {
+            SigmaFrom::Number(v) => write!(f, "{v}"),
+            SigmaFrom::Poisson(gain, read) => write!(f, "poisson:{gain},{read}"),
+            SigmaFrom::File(path) => write!(f, "{}", path.display()),
+        }
+    }
+}
+
+impl std::str::FromStr for SigmaFrom {
+    type Err = Error;
+    fn from_str(s: &str) -> Result<Self> {
+        if let Ok(v) = s.parse::<f64>() {
+            return if v >= 0.0 && v.is_finite() {
+                Ok(SigmaFrom::Number(v))
+            } else {
+                Err(Error::usage(
+                    format!("--sigma {s}: an uncertainty is not negative"),
+                    "such as --sigma 0.5",
+                ))
+            };
+        }
+        let Some(numbers) = s.strip_prefix("poisson:") else { return Ok(SigmaFrom::File(s.into())) };
+        let mut parts = numbers.split(',').map(|p| p.trim().parse::<f64>());
+        match (parts.next(), parts.next(), parts.next()) {
+            (Some(Ok(gain)), Some(Ok(read)), None)
+                if gain > 0.0 && read >= 0.0 && gain.is_finite() && read.is_finite() =>
+            {
+                Ok(SigmaFrom::Poisson(gain, read))
+            }
+            _ => Err(Error::usage(
+                format!(
+                    "--sigma {s}: two numbers are needed, electrons a count and electrons of reading noise"
+                ),
+                "such as --sigma poisson:2.2,5",
+            )),
+        }
+    }
+}
+
+impl Serialize for SigmaFrom {
+    fn serialize<S: Serializer>(&self, s: S) -> Result<S::Ok, S::Error> {
+        s.collect_str(self)
+    }
+}
+
+impl<'de> Deserialize<'de> for SigmaFrom {
+    fn deserialize<D: Deserializer<'de>>(d: D) -> Result<Self, D::Error> {
+        String::deserialize(d)?.parse().map_err(serde::de::Error::custom)
+    }
+}
+
+impl SigmaFrom {
+    /// The noise of a raster of this header.
+    ///
+    /// # Errors
+    /// When the file cannot be read or does not fit the raster.
+    pub fn open(&self, header: &Header) -> Result<Noise> {
+        Ok(match self {
+            SigmaFrom::Number(v) => Noise::Even(*v),
+            SigmaFrom::Poisson(gain, read) => Noise::Poisson { gain: *gain, read: *read },
+            SigmaFrom::File(path) => {
+                let source = raster::open(path)?;
+                let own = source.header();
+                let (rows, columns) = (header.grid.rows, header.grid.columns);
+                if (own.grid.rows, own.grid.columns) != (rows, columns)
+                    || (own.bands != 1 && own.bands != header.bands)
+                {
+                    return Err(Error::unfit(
+                        format!(
+                            "{}: {} x {} pixels in {} bands are no uncertainties for {rows} x {columns} in {}",
+                            path.display(),
+                            own.grid.rows,
+                            own.grid.columns,
+                            own.bands,
+                            header.bands
+                        ),
+                        "give a raster of the input's size, with one band or as many as the input",
+                    ));
+                }
+                let codes = MissingCodes { codes: own.missing.into_iter().filter(|c| !c.is_nan()).collect() };
+                Noise::Plane(source.into(), codes)
+            }
+        })
+    }
+}
+
+/// The planes beside an output.
+pub(super) struct Planes {
+    sigma: Option<(Box<dyn Sink>, SampleType)>,
+    coverage: Option<Box<dyn Sink>>,
+}
+
+impl Planes {
+    /// Starts the files.
+    pub fn create(header: &Header, conduct: &Conduct) -> Result<Self> {
+        let start = |path: &PathBuf, header: &Header| raster::create(path, header, conduct.overwrite);
+        let own = plane_header(header, sigma_type(header));
+        let sigma = conduct.sigma_out.as_ref().map(|p| start(p, &own)).transpose()?;
+        let coverage = conduct.coverage.as_ref().map(|p| start(p, &plane_header(header, SampleType::F32)));
+        Ok(Planes { sigma: sigma.map(|s| (s, own.sample_type)), coverage: coverage.transpose()? })
+    }
+
+    /// Refuses, before any work, a file that cannot hold such a plane.
+    pub fn check(path: &Path, header: &Header) -> Result<()> {
+        raster::check_writable(path, &plane_header(header, SampleType::F32))
+    }
+
+    pub fn alignment(&self) -> usize {
+        let sigma = self.sigma.as_ref().map_or(1, |s| s.0.alignment());
+        sigma.max(self.coverage.as_ref().map_or(1, |s| s.alignment()))
+    }
+
+    pub fn wants_sigma(&self) -> bool {
+        self.sigma.is_some()
+    }
+
+    pub fn wants_coverage(&self) -> bool {
+        self.coverage.is_some()
+    }
+
+    pub fn write(&mut self, block: &Block) -> Result<()> {
+        if let (Some((sink, sample_type)), Some(sigma)) = (&mut self.sigma, &block.sigma) {
+            let samples = match sample_type {
+                SampleType::F64 => Samples::F64(sigma.clone()),
+                _ => Samples::F32(sigma.iter().map(|v| *v as f32).collect()),
+            };
+            sink.write(&block.window, &samples)?;
+        }
+        if let (Some(sink), Some(coverage)) = (&mut self.coverage, &block.coverage) {
+            sink.write(&block.window, &Samples::F32(coverage.clone()))?;
+        }
+        Ok(())
+    }
+
+    pub fn finish(self) -> Result<()> {
+        if let Some((sink, _)) = self.sigma {
+            sink.finish()?;
+        }
+        self.coverage.map_or(Ok(()), |sink| sink.finish())
+    }
+}
+
+/// f64 where the output is; f32 is more than any uncertainty deserves otherwise.
+fn sigma_type(header: &Header) -> SampleType {
+    if header.sample_type == SampleType::F64 { SampleType::F64 } else { SampleType::F32 }
+}
+
+/// The output's header for floating-point samples, NaN for what is missing.
+fn plane_header(header: &Header, sample_type: SampleType) -> Header {
+    let mut own = Header { sample_type, missing: None, ..header.clone() };
+    // A colour table, and a predictor for whole numbers, belong to the output's own samples.
+    own.storage.color_map.clear();
+    own.storage.photometric = None;
+    own.storage.predictor = 1;
+    own
+}
