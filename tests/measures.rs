@@ -224,3 +224,24 @@ fn the_local_closure_shows_where_signal_went() {
         assert!((v.unwrap() - want).abs() < 1e-12, "{i}: {v:?}");
     }
 }
+
+#[test]
+fn sums_of_correlated_pixels_are_less_certain_than_they_look() {
+    use regauge::resample::Rules;
+    let v: Vec<f64> = (0..80 * 80).map(|i| f64::from(i % 17)).collect();
+    // Half a pixel, linear: N outputs take 1/2, 1, ..., 1, 1/2 of N + 1 samples along an axis, so that the variance of the
+    // sum is N - 1/2 and that of the parts N / 2: a factor of sqrt(2 - 1/N) an axis.
+    let upright = Map::shift(0.5, 0.5);
+    // The same to a hair, but no longer along rows and columns.
+    let turned = Map::affine([[1.0, 1e-9, 0.5], [-1e-9, 1.0, 0.5]]);
+    for back in [upright, turned] {
+        let rules = Rules { kernel: "linear".parse().unwrap(), ..Rules::default() };
+        let noise = ledger_of(v.clone(), (80, 80), back, (79, 79), rules).noise;
+        let of = noise.sum_underestimated;
+        for (n, factor) in [(2.0, of.of_2), (5.0, of.of_5), (10.0, of.of_10), (50.0, of.of_50)] {
+            let want: f64 = 2.0 - 1.0 / n;
+            assert!((factor.unwrap() - want).abs() < 1e-6, "{n}: {factor:?} for {want}");
+        }
+        assert!((noise.lag1_rows - 0.5).abs() < 1e-6 && (noise.gain_mean - 0.25).abs() < 1e-6);
+    }
+}

@@ -7,7 +7,7 @@ use crate::measure::{Balance, Costs, Frame, Local, Sum, closure, step_overshoot}
 use crate::raster::{Digest, Header, MissingCodes, Sample, SampleType, Samples, Source, Window};
 use crate::report::{
     Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, LocalClosure, Noise, Pixels, RasterEntry,
-    Ringing, Time, Transfer, peak_memory_bytes,
+    Ringing, SumUnderestimated, Time, Transfer, peak_memory_bytes,
 };
 use crate::resample::{Counts, Limit, Plan, Reduce, Rules, Shifted, Values};
 use crate::with_samples;
@@ -223,6 +223,7 @@ pub struct Run<'a> {
     pub shifted: Shifted,
     pub local: &'a Local,
     pub costs: Costs,
+    pub underestimates: [Option<f64>; 4],
     pub seconds: f64,
 }
 
@@ -330,6 +331,7 @@ impl Run<'_> {
                 gain_max: self.costs.gain[2],
                 lag1_rows: self.costs.lag1_rows,
                 lag1_columns: self.costs.lag1_columns,
+                sum_underestimated: SumUnderestimated::of(self.underestimates),
             },
             time: Time {
                 seconds: self.seconds,

@@ -5,6 +5,7 @@ mod compared;
 mod costs;
 mod describe;
 mod planes;
+mod windows;
 
 pub use describe::{BandStatistics, describe};
 pub use planes::SigmaFrom;
@@ -398,6 +399,7 @@ impl Ready<'_> {
             shifted,
             local: &before.local,
             costs,
+            underestimates: windows::underestimates(&self.plan, &job.rules, size, target),
             seconds: started.elapsed().as_secs_f64(),
         };
         Ok(run.ledger())

@@ -218,6 +218,34 @@ pub struct Noise {
     pub lag1_rows: f64,
     /// The same for the next column.
     pub lag1_columns: f64,
+    /// By which factor the uncertainty of a sum over N x N pixels is underestimated if the correlation is forgotten.
+    #[serde(default)]
+    pub sum_underestimated: SumUnderestimated,
+}
+
+/// The factor for windows of 2, 5, 10 and 50 pixels a side; null where it was not worked out.
+#[derive(Clone, Copy, Debug, Default, PartialEq, Serialize, Deserialize)]
+pub struct SumUnderestimated {
+    /// 2 x 2.
+    #[serde(rename = "2")]
+    pub of_2: Option<f64>,
+    /// 5 x 5.
+    #[serde(rename = "5")]
+    pub of_5: Option<f64>,
+    /// 10 x 10.
+    #[serde(rename = "10")]
+    pub of_10: Option<f64>,
+    /// 50 x 50.
+    #[serde(rename = "50")]
+    pub of_50: Option<f64>,
+}
+
+impl SumUnderestimated {
+    /// From the four factors in order.
+    pub fn of(factors: [Option<f64>; 4]) -> Self {
+        let [of_2, of_5, of_10, of_50] = factors;
+        SumUnderestimated { of_2, of_5, of_10, of_50 }
+    }
 }
 
 /// What the run took.

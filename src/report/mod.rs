@@ -15,7 +15,7 @@ mod ticks;
 
 pub use ledger::{
     Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, LocalClosure, Noise, Pixels, RasterEntry,
-    Ringing, Time, Transfer, peak_memory_bytes, write_whole,
+    Ringing, SumUnderestimated, Time, Transfer, peak_memory_bytes, write_whole,
 };
 pub use maps::{Group, MapOptions, Panel, Scale, draw_map, draw_maps};
 pub use palette::Palette;

@@ -176,6 +176,19 @@ impl Effective {
         run.first
     }
 
+    /// The same axis with output 0 at another place.
+    pub fn look_at(&mut self, offset: f64) {
+        self.axis.offset = offset;
+    }
+
+    /// The weights of output `o` on extended samples, as if the line had no ends.
+    pub fn unfolded(&self, o: i64, out: &mut Vec<f64>) -> i64 {
+        let mut run = self.extended(o);
+        run.trim();
+        out.clone_from(&run.weights);
+        run.first
+    }
+
     /// The weights on extended samples.
     fn extended(&self, o: i64) -> Run {
         let mut outputs = Run { first: o, weights: vec![1.0] };

@@ -26,6 +26,7 @@ pub mod weights;
 
 pub use blocks::{Block, Engine, Extras};
 pub use convert::Counts;
+pub use effective::Effective;
 pub use overlap::{Cells, corners};
 pub use plan::{Plan, Size};
 
