@@ -46,18 +46,63 @@ struct Look {
     columns: usize,
     sample_type: SampleType,
     samples: usize,
+    bits: u64,
+}
+
+/// The mask pages of a file: 8 bits a pixel, or 1 packed from the highest bit on.
+pub struct MaskPages {
+    header: Header,
+    bytes: TiffSource,
+    packed: bool,
+    /// Bands of the raster to a page.
+    samples: usize,
+}
+
+impl MaskPages {
+    /// Bands of the raster that one mask page serves.
+    fn page_of(&self, band: usize) -> usize {
+        if self.bytes.pages.len() == 1 { 0 } else { band / self.samples }
+    }
+}
+
+impl Source for MaskPages {
+    fn header(&self) -> &Header {
+        &self.header
+    }
+
+    fn read(&self, bands: Range<usize>, window: &Window) -> Result<Samples> {
+        let mut out = Vec::with_capacity(bands.len() * window.area());
+        for band in bands {
+            let page = self.page_of(band);
+            let columns = match self.packed {
+                true => window.columns.start / 8..window.columns.end.div_ceil(8),
+                false => window.columns.clone(),
+            };
+            let part = Window { rows: window.rows.clone(), columns: columns.clone() };
+            let Samples::U8(bytes) = self.bytes.read(page..page + 1, &part)? else { continue };
+            if !self.packed {
+                out.extend(bytes);
+                continue;
+            }
+            for line in bytes.chunks(columns.len().max(1)) {
+                out.extend(window.columns.clone().map(|c| (line[c / 8 - columns.start] >> (7 - c % 8)) & 1));
+            }
+        }
+        Ok(Samples::U8(out))
+    }
 }
 
 impl TiffSource {
-    /// Opens a TIFF file; reads its directories, no samples.
+    /// Opens a TIFF file; reads its directories, no samples. Mask pages come apart.
     ///
     /// # Errors
     /// When the file is damaged or uses what Regauge does not read.
-    pub fn open(path: &Path) -> Result<Self> {
+    pub fn open(path: &Path) -> Result<(Self, Option<MaskPages>)> {
         let mut directories = Directories::read(path)?;
         let mut storage = Storage { format: Format::Tiff, ..Storage::default() };
         let mut pages: Vec<Page> = Vec::new();
         let mut look: Option<Look> = None;
+        let mut masks = Vec::new();
         let mut reduced = 0;
         for index in 0..directories.pages.len() {
             let kind = directories.integer(index, tags::NEW_SUBFILE_TYPE)?.unwrap_or(0);
@@ -66,13 +111,10 @@ impl TiffSource {
                 continue;
             }
             if kind & 4 != 0 {
-                return Err(Error::unsupported(
-                    path,
-                    format!("page {} is a transparency mask", index + 1),
-                    "write the mask into the samples as NaN or a no-data code",
-                ));
+                masks.push(read_page(&mut directories, path, index, true)?);
+                continue;
             }
-            let (page, this) = read_page(&mut directories, path, index)?;
+            let (page, this) = read_page(&mut directories, path, index, false)?;
             match look {
                 None => {
                     look = Some(this);
@@ -127,7 +169,43 @@ impl TiffSource {
         let missing = directories.text(0, tags::NO_DATA)?.and_then(|t| parse_no_data(&t, &mut storage.notes));
         let file = File::open(path).map_err(|e| Error::io(path, "opening", e))?;
         let header = Header { grid, bands, sample_type: look.sample_type, missing, band_names, storage };
-        Ok(TiffSource { header, path: path.to_owned(), file, big_endian: directories.big_endian, pages })
+        let source =
+            TiffSource { header, path: path.to_owned(), file, big_endian: directories.big_endian, pages };
+        let mask = if masks.is_empty() { None } else { Some(source.mask(masks, look)?) };
+        Ok((source, mask))
+    }
+
+    /// The mask pages as a raster: 0 where a sample is missing.
+    fn mask(&self, masks: Vec<(Page, Look)>, look: Look) -> Result<MaskPages> {
+        let packed = masks[0].1.bits == 1;
+        for (_, this) in &masks {
+            let fits = (this.rows, this.columns, this.samples) == (look.rows, look.columns, 1);
+            if !fits || this.bits != masks[0].1.bits || (masks.len() > 1 && masks.len() != self.pages.len()) {
+                return Err(Error::unsupported(
+                    &self.path,
+                    format!(
+                        "{} mask pages, one of {} x {} pixels of {} bits, do not fit {} pages of {} x {}",
+                        masks.len(),
+                        this.rows,
+                        this.columns,
+                        this.bits,
+                        self.pages.len(),
+                        look.rows,
+                        look.columns
+                    ),
+                    "give one mask page of the raster's size, or one for each page",
+                ));
+            }
+        }
+        let header = Header::new(Grid::new(look.rows, look.columns), masks.len(), SampleType::U8);
+        let columns = if packed { look.columns.div_ceil(8) } else { look.columns };
+        let mut stored = Header::new(Grid::new(look.rows, columns), masks.len(), SampleType::U8);
+        stored.storage.samples_per_pixel = 1;
+        let file = self.file.try_clone().map_err(|e| Error::io(&self.path, "opening", e))?;
+        let pages = masks.into_iter().map(|m| m.0).collect();
+        let bytes =
+            TiffSource { header: stored, path: self.path.clone(), file, big_endian: self.big_endian, pages };
+        Ok(MaskPages { header, bytes, packed, samples: look.samples })
     }
 
     fn decode_chunk(&self, page: &Page, plane: usize, chunk: (usize, usize)) -> Result<Option<Vec<u8>>> {
@@ -307,7 +385,8 @@ impl ChunkPart<'_> {
     }
 }
 
-fn read_page(d: &mut Directories, path: &Path, index: usize) -> Result<(Page, Look)> {
+/// A page's chunks and look; a mask may have 1 bit a pixel, and its chunks are then those of its bytes.
+fn read_page(d: &mut Directories, path: &Path, index: usize, mask: bool) -> Result<(Page, Look)> {
     let bad = |what: String| Error::malformed(path, format!("page {}", index + 1), what);
     let unsupported =
         |what: String, mend: &str| Error::unsupported(path, format!("page {}: {what}", index + 1), mend);
@@ -335,6 +414,7 @@ fn read_page(d: &mut Directories, path: &Path, index: usize) -> Result<(Page, Lo
     }
     let sample_type = match (format, bit) {
         (1 | 4, 8) => SampleType::U8,
+        (1 | 4, 1) if mask && samples == 1 => SampleType::U8,
         (2, 8) => SampleType::I8,
         (1 | 4, 16) => SampleType::U16,
         (2, 16) => SampleType::I16,
@@ -389,13 +469,14 @@ fn read_page(d: &mut Directories, path: &Path, index: usize) -> Result<(Page, Lo
         2 => samples > 1,
         p => return Err(bad(format!("planar configuration {p}"))),
     };
+    let stored = |pixels: usize| if bit == 1 { pixels.div_ceil(8) } else { pixels };
     let tile = (d.integer(index, tags::TILE_HEIGHT)?, d.integer(index, tags::TILE_WIDTH)?);
     let (tiled, chunk, where_tag, count_tag) = match tile {
-        (Some(h), Some(w)) => (true, (h as usize, w as usize), tags::TILE_OFFSETS, tags::TILE_COUNTS),
+        (Some(h), Some(w)) => (true, (h as usize, stored(w as usize)), tags::TILE_OFFSETS, tags::TILE_COUNTS),
         _ => {
             let strip = d.integer(index, tags::ROWS_PER_STRIP)?.unwrap_or(u64::MAX);
             let strip = usize::try_from(strip).unwrap_or(usize::MAX).clamp(1, rows);
-            (false, (strip, columns), tags::STRIP_OFFSETS, tags::STRIP_COUNTS)
+            (false, (strip, stored(columns)), tags::STRIP_OFFSETS, tags::STRIP_COUNTS)
         }
     };
     if chunk.0 == 0 || chunk.1 == 0 {
@@ -420,7 +501,7 @@ fn read_page(d: &mut Directories, path: &Path, index: usize) -> Result<(Page, Lo
     }
     let planes = if planar { samples } else { 1 };
     let wanted =
-        rows.div_ceil(chunk.0).checked_mul(columns.div_ceil(chunk.1)).and_then(|c| c.checked_mul(planes));
+        rows.div_ceil(chunk.0).checked_mul(stored(columns).div_ceil(chunk.1)).and_then(|c| c.checked_mul(planes));
     let offsets = d.integers(index, where_tag)?;
     let mut counts = d.integers(index, count_tag)?;
     if wanted != Some(offsets.len()) {
@@ -441,7 +522,7 @@ fn read_page(d: &mut Directories, path: &Path, index: usize) -> Result<(Page, Lo
     }
     let page =
         Page { samples, planar, compression, predictor: predictor as u16, chunk, tiled, offsets, counts };
-    Ok((page, Look { rows, columns, sample_type, samples }))
+    Ok((page, Look { rows, columns, sample_type, samples, bits: bit }))
 }
 
 fn read_storage(d: &mut Directories, index: usize, page: &Page, storage: &mut Storage) -> Result<()> {
