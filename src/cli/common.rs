@@ -118,6 +118,9 @@ pub struct Running {
     /// Replace outputs that exist
     #[arg(long)]
     pub overwrite: bool,
+    /// Tell what would come out, the memory and the time it would take; write nothing
+    #[arg(long)]
+    pub dry_run: bool,
     /// Say nothing but errors
     #[arg(long, short)]
     pub quiet: bool,
@@ -234,6 +237,18 @@ pub fn run_job(job: &Job, running: &Running, conduct: &Conduct) -> Result<Ledger
         say(&[format!("ledger: {}", path.display())]);
     }
     Ok(made)
+}
+
+/// Tells what a job would take.
+pub fn tell_estimate(job: &Job, conduct: &Conduct, running: &Running) -> Result<Outcome> {
+    let estimate = job.estimate(conduct)?;
+    if running.json {
+        print_json(&estimate)?;
+    }
+    if !running.quiet {
+        say(&estimate.summary());
+    }
+    Ok(Outcome::Done)
 }
 
 /// Prints lines to stderr.

@@ -8,6 +8,7 @@ mod r#move;
 mod progress;
 mod replay;
 mod rescale;
+mod subtract;
 mod unify;
 
 use crate::error::{Error, Result};
@@ -39,6 +40,8 @@ enum Command {
     Move(r#move::Arguments),
     /// Several rasters onto one grid: the main job
     Unify(unify::Arguments),
+    /// The difference of two rasters on one grid, with its uncertainty
+    Subtract(subtract::Arguments),
     /// What is in a file: grid, samples, missing, statistics
     Describe(describe::Arguments),
     /// The kernels, with support, order, regularity and poles
@@ -65,6 +68,7 @@ pub fn main() -> ExitCode {
         Command::Rescale(a) => rescale::run(&a),
         Command::Move(a) => r#move::run(&a),
         Command::Unify(a) => unify::run(&a),
+        Command::Subtract(a) => subtract::run(&a),
         Command::Describe(a) => describe::run(&a),
         Command::Kernels(a) => kernels::run(&a),
         Command::Replay(a) => replay::run(&a),

@@ -3,7 +3,7 @@
 use super::Outcome;
 use super::common::{
     OutsideOption, Planes, Resampling, Running, about, command_line, conclude, row_and_column, rules,
-    run_job, say_notes, warn_of_kernel,
+    run_job, say_notes, tell_estimate, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::job::{Conduct, Job};
@@ -103,6 +103,9 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         sigma_out: a.planes.sigma_out.clone(),
         coverage: a.planes.coverage.clone(),
     };
+    if a.running.dry_run {
+        return tell_estimate(&job, &conduct, &a.running);
+    }
     let ledger = run_job(&job, &a.running, &conduct)?;
     conclude(&[ledger], &a.running)
 }

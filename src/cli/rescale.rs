@@ -3,7 +3,7 @@
 use super::Outcome;
 use super::common::{
     Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say_notes, size,
-    warn_of_kernel,
+    tell_estimate, warn_of_kernel,
 };
 use crate::error::Result;
 use crate::job::{Conduct, Job};
@@ -77,6 +77,9 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         sigma_out: a.planes.sigma_out.clone(),
         coverage: a.planes.coverage.clone(),
     };
+    if a.running.dry_run {
+        return tell_estimate(&job, &conduct, &a.running);
+    }
     let ledger = run_job(&job, &a.running, &conduct)?;
     conclude(&[ledger], &a.running)
 }

@@ -3,7 +3,7 @@
 use super::Outcome;
 use super::common::{
     OutsideOption, Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say,
-    say_notes, warn_of_kernel,
+    say_notes, tell_estimate, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::grid::{Grid, Span, span};
@@ -92,8 +92,8 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
             command: command_line(),
             ledger: None,
             overwrite: a.running.overwrite,
-            sigma_out: beside(a.planes.sigma_out.as_deref(), &output)?,
-            coverage: beside(a.planes.coverage.as_deref(), &output)?,
+            sigma_out: beside(a.planes.sigma_out.as_deref(), &output),
+            coverage: beside(a.planes.coverage.as_deref(), &output),
         };
         let job = Job {
             input: path.clone(),
@@ -106,7 +106,19 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         };
         jobs.push((job, conduct));
     }
-    std::fs::create_dir_all(&a.out).map_err(|e| Error::io(&a.out, "making the folder", e))?;
+    let folders = [Some(&a.out), a.planes.sigma_out.as_ref(), a.planes.coverage.as_ref()];
+    if a.running.dry_run {
+        // Nothing is written, not even a folder: what would be new there is free.
+        for (job, conduct) in &mut jobs {
+            job.output = job.output.file_name().map(PathBuf::from).unwrap_or_default();
+            *conduct = Conduct { command: Vec::new(), overwrite: true, ..Conduct::default() };
+            tell_estimate(job, conduct, &a.running)?;
+        }
+        return Ok(Outcome::Done);
+    }
+    for folder in folders.into_iter().flatten() {
+        std::fs::create_dir_all(folder).map_err(|e| Error::io(folder, "making the folder", e))?;
+    }
     // All that can be refused is refused before the first raster is touched.
     for (job, conduct) in &jobs {
         job.check(conduct)?;
@@ -166,7 +178,13 @@ fn place_by_map(path: &Path, grid: &Grid, file: &MapFile, first: &Grid) -> Resul
 }
 
 /// From target positions to positions in the raster.
-fn way_back(path: &Path, grid: &Grid, file: Option<&MapFile>, target: &Grid, name: &str) -> Result<Map> {
+pub(super) fn way_back(
+    path: &Path,
+    grid: &Grid,
+    file: Option<&MapFile>,
+    target: &Grid,
+    name: &str,
+) -> Result<Map> {
     let Some(file) = file else {
         target.check_same_crs(grid, (name, &path.display().to_string()))?;
         if target.world.is_some() && grid.world.is_none() {
@@ -228,11 +246,9 @@ fn way_back(path: &Path, grid: &Grid, file: Option<&MapFile>, target: &Grid, nam
     Ok(onto_reference.then(&map.invert()?).then(&moving))
 }
 
-/// The output's name in the folder of a plane, which is made if needed.
-fn beside(folder: Option<&Path>, output: &Path) -> Result<Option<PathBuf>> {
-    let Some(folder) = folder else { return Ok(None) };
-    std::fs::create_dir_all(folder).map_err(|e| Error::io(folder, "making the folder", e))?;
-    Ok(output.file_name().map(|name| folder.join(name)))
+/// The output's name in the folder of a plane.
+fn beside(folder: Option<&Path>, output: &Path) -> Option<PathBuf> {
+    Some(folder?.join(output.file_name()?))
 }
 
 /// The input's own name; with .tif where its format is only read.

@@ -4,11 +4,15 @@ mod account;
 mod compared;
 mod costs;
 mod describe;
+mod estimate;
 mod planes;
+mod subtract;
 mod windows;
 
 pub use describe::{BandStatistics, describe};
+pub use estimate::Estimate;
 pub use planes::SigmaFrom;
+pub use subtract::{Difference, DifferenceLedger, Subtract};
 
 use crate::error::{Error, Result};
 use crate::grid::Grid;
@@ -117,7 +121,7 @@ impl Job {
             ready.check_missing(0)?;
             let sink = raster::create(&self.output, &ready.header, conduct.overwrite)?;
             let planes = Planes::create(&ready.header, conduct)?;
-            let ledger = ready.carry_out(Some((sink, planes)), &conduct.command, progress)?;
+            let ledger = ready.carry_out(Some((sink, planes)), None, &conduct.command, progress)?;
             ledger.write(&conduct.ledger.clone().unwrap_or_else(|| self.ledger_path()))?;
             Ok(ledger)
         })
@@ -131,7 +135,7 @@ impl Job {
         self.in_pool(|| {
             let ready = self.ready()?;
             ready.check_missing(0)?;
-            ready.carry_out(None, &[], progress)
+            ready.carry_out(None, None, &[], progress)
         })
     }
 
@@ -143,6 +147,7 @@ impl Job {
             .install(work)
     }
 
+    /// Opens the input and makes the plan.
     fn ready(&self) -> Result<Ready<'_>> {
         self.rules.check()?;
         self.target.check()?;
@@ -313,6 +318,7 @@ impl Ready<'_> {
     fn carry_out(
         self,
         mut sink: Option<(Box<dyn Sink>, Planes)>,
+        side: Option<usize>,
         command: &[String],
         progress: &dyn Progress,
     ) -> Result<Ledger> {
@@ -347,7 +353,7 @@ impl Ready<'_> {
         let (mut counts, mut near_gap, mut done) = (Counts::default(), 0, from.grid.pixels() as u64);
         let mut shifted = Shifted::default();
         let total = done + self.header.grid.pixels() as u64;
-        let outside = engine.run(alignment, None, &mut |block| {
+        let outside = engine.run(alignment, side, &mut |block| {
             if progress.stopped() {
                 return Err(Error::Stopped);
             }

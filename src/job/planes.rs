@@ -2,7 +2,7 @@
 
 use super::Conduct;
 use crate::error::{Error, Result};
-use crate::raster::{self, Header, MissingCodes, SampleType, Samples, Sink};
+use crate::raster::{self, Header, MissingCodes, SampleType, Samples, Sink, Window};
 use crate::resample::{Block, Noise};
 use serde::{Deserialize, Deserializer, Serialize, Serializer};
 use std::path::{Path, PathBuf};
@@ -127,6 +127,22 @@ impl Planes {
         raster::check_writable(path, &plane_header(header, SampleType::F32))
     }
 
+    /// A plane of sigma only, which takes f64.
+    pub fn of_sigma(sink: Option<Box<dyn Sink>>) -> Self {
+        Planes { sigma: sink.map(|s| (s, SampleType::F64)), coverage: None }
+    }
+
+    /// Starts one file of f32.
+    pub fn plane(path: &PathBuf, header: &Header, overwrite: bool) -> Result<Box<dyn Sink>> {
+        raster::create(path, &plane_header(header, SampleType::F32), overwrite)
+    }
+
+    /// Bytes that the planes take for each sample.
+    pub fn bytes(header: &Header, conduct: &Conduct) -> u64 {
+        let of_sigma = if conduct.sigma_out.is_some() { sigma_type(header).bytes() } else { 0 };
+        (of_sigma + if conduct.coverage.is_some() { 4 } else { 0 }) as u64
+    }
+
     pub fn alignment(&self) -> usize {
         let sigma = self.sigma.as_ref().map_or(1, |s| s.0.alignment());
         sigma.max(self.coverage.as_ref().map_or(1, |s| s.alignment()))
@@ -141,17 +157,22 @@ impl Planes {
     }
 
     pub fn write(&mut self, block: &Block) -> Result<()> {
-        if let (Some((sink, sample_type)), Some(sigma)) = (&mut self.sigma, &block.sigma) {
-            let samples = match sample_type {
-                SampleType::F64 => Samples::F64(sigma.clone()),
-                _ => Samples::F32(sigma.iter().map(|v| *v as f32).collect()),
-            };
-            sink.write(&block.window, &samples)?;
+        if let Some(sigma) = &block.sigma {
+            self.write_sigma(&block.window, sigma)?;
         }
         if let (Some(sink), Some(coverage)) = (&mut self.coverage, &block.coverage) {
             sink.write(&block.window, &Samples::F32(coverage.clone()))?;
         }
         Ok(())
+    }
+
+    pub fn write_sigma(&mut self, window: &Window, sigma: &[f64]) -> Result<()> {
+        let Some((sink, sample_type)) = &mut self.sigma else { return Ok(()) };
+        let samples = match sample_type {
+            SampleType::F64 => Samples::F64(sigma.to_vec()),
+            _ => Samples::F32(sigma.iter().map(|v| *v as f32).collect()),
+        };
+        sink.write(window, &samples)
     }
 
     pub fn finish(self) -> Result<()> {

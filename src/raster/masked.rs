@@ -43,7 +43,8 @@ impl Masked {
         let own = mask.header();
         let (rows, columns) = (header.grid.rows, header.grid.columns);
         let bands_fit = own.bands == 1 || own.bands == header.bands || flags == Flags::Zero;
-        if (own.grid.rows, own.grid.columns) != (rows, columns) || !bands_fit {return Err(Error::unfit(
+        if (own.grid.rows, own.grid.columns) != (rows, columns) || !bands_fit {
+            return Err(Error::unfit(
                 format!(
                     "{name}: a mask of {} x {} pixels in {} bands does not fit {rows} x {columns} in {}",
                     own.grid.rows, own.grid.columns, own.bands, header.bands

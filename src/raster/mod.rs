@@ -231,15 +231,13 @@ pub fn open(path: &Path) -> Result<Box<dyn Source>> {
     file.by_ref().take(8).read_to_end(&mut head).map_err(|e| Error::io(path, "reading", e))?;
     Ok(match &head[..] {
         [] => return Err(Error::malformed(path, "byte 0", "the file is empty")),
-        [b'I', b'I', 42 | 43, 0, ..] | [b'M', b'M', 0, 42 | 43, ..] => {
-            match tiff::TiffSource::open(path)? {
-                (source, None) => Box::new(source),
-                (source, Some(mask)) => {
-                    let name = path.display().to_string();
-                    Box::new(Masked::new(Box::new(source), Box::new(mask), Flags::Zero, &[], &name)?)
-                }
+        [b'I', b'I', 42 | 43, 0, ..] | [b'M', b'M', 0, 42 | 43, ..] => match tiff::TiffSource::open(path)? {
+            (source, None) => Box::new(source),
+            (source, Some(mask)) => {
+                let name = path.display().to_string();
+                Box::new(Masked::new(Box::new(source), Box::new(mask), Flags::Zero, &[], &name)?)
             }
-        }
+        },
         [0x93, b'N', b'U', b'M', b'P', b'Y', ..] => Box::new(npy::NpySource::open(path)?),
         [0x89, b'P', b'N', b'G', ..] | [0xff, 0xd8, ..] | [b'P', b'1'..=b'7', ..] => {
             Box::new(picture::open(path)?)

@@ -72,6 +72,37 @@ pub struct Block {
     pub sigma: Option<Vec<f64>>,
 }
 
+/// An engine with its passes prepared.
+pub struct Runner<'a> {
+    engine: &'a Engine<'a>,
+    passes: Precision,
+}
+
+/// The passes in the precision that the samples ask for.
+enum Precision {
+    F32(Passes<f32>),
+    F64(Passes<f64>),
+}
+
+impl Runner<'_> {
+    /// Resamples a window of the output.
+    ///
+    /// # Errors
+    /// When the source cannot be read.
+    pub fn window(&self, rows: &Range<usize>, columns: &Range<usize>) -> Result<Block> {
+        let engine = self.engine;
+        match (&engine.plan, &self.passes) {
+            (Plan::Copy { swapped, rows: a, columns: b }, _)
+                if engine.copies_bits() && engine.extras.noise.is_none() =>
+            {
+                engine.copied(*swapped, (*a, *b), rows, columns)
+            }
+            (_, Precision::F64(passes)) => engine.block(passes, rows, columns),
+            (_, Precision::F32(passes)) => engine.block(passes, rows, columns),
+        }
+    }
+}
+
 impl Engine<'_> {
     /// Rows and columns of the source.
     pub(super) fn source_size(&self) -> Size {
@@ -79,8 +110,8 @@ impl Engine<'_> {
         (grid.rows, grid.columns)
     }
 
-    /// Runs all blocks in order. Of totals, what falls outside the frame is added up afterwards and returned. `alignment` is what the sink asks of windows; `side` fixes the side of blocks (for tests
-    /// of the promise that it does not matter), otherwise they follow the memory.
+    /// Runs all blocks in order. Of totals, what falls outside the frame is added up afterwards and returned. `alignment` is
+    /// what the sink asks of windows; `side` fixes the side of blocks, otherwise they follow the memory.
     ///
     /// # Errors
     /// What the source or `take` meets, or a limit when not even one small block fits the memory.
@@ -94,31 +125,37 @@ impl Engine<'_> {
             Some(s) => (s, s),
             None => self.block_size(alignment)?,
         };
-        let wide = self.computes_in_f64();
-        let passes64 = wide.then(|| Passes::<f64>::new(self));
-        let passes32 = (!wide).then(|| Passes::<f32>::new(self));
+        let runner = self.runner();
         for r in (0..self.target.0).step_by(height) {
             for c in (0..self.target.1).step_by(width) {
                 let rows = r..(r + height).min(self.target.0);
                 let columns = c..(c + width).min(self.target.1);
-                let block = match (&self.plan, &passes64, &passes32) {
-                    (Plan::Copy { swapped, rows: a, columns: b }, _, _)
-                        if self.copies_bits() && self.extras.noise.is_none() =>
-                    {
-                        self.copied(*swapped, (*a, *b), &rows, &columns)?
-                    }
-                    (_, Some(p), _) => self.block(p, &rows, &columns)?,
-                    (_, _, Some(p)) => self.block(p, &rows, &columns)?,
-                    // One of the two was made above.
-                    (_, None, None) => continue,
-                };
-                take(block)?;
+                take(runner.window(&rows, &columns)?)?;
             }
         }
-        match &passes64 {
-            Some(passes) => self.outside(passes, height, width),
-            None => Ok(Shifted::default()),
+        match &runner.passes {
+            Precision::F64(passes) => self.outside(passes, height, width),
+            Precision::F32(_) => Ok(Shifted::default()),
         }
+    }
+
+    /// The engine with its passes prepared, for windows in any order.
+    pub fn runner(&self) -> Runner<'_> {
+        let passes = if self.computes_in_f64() {
+            Precision::F64(Passes::new(self))
+        } else {
+            Precision::F32(Passes::new(self))
+        };
+        Runner { engine: self, passes }
+    }
+
+    /// What the passes are expected to need at most, in bytes, at the size of blocks that the memory allows.
+    ///
+    /// # Errors
+    /// When not even one small block fits the memory.
+    pub fn block_need(&self, alignment: usize) -> Result<(Size, usize)> {
+        let (height, width) = self.block_size(alignment)?;
+        Ok(((height, width), self.block_bytes(height, width)))
     }
 
     /// Adds up what a raster of totals leaves beyond the frame: the same cells as within, one by one.

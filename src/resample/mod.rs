@@ -24,8 +24,8 @@ mod values;
 mod variance;
 pub mod weights;
 
-pub use blocks::{Block, Engine, Extras};
-pub use convert::Counts;
+pub use blocks::{Block, Engine, Extras, Runner};
+pub use convert::{Counts, convert};
 pub use effective::Effective;
 pub use overlap::{Cells, corners};
 pub use plan::{Plan, Size};

@@ -500,8 +500,10 @@ fn read_page(d: &mut Directories, path: &Path, index: usize, mask: bool) -> Resu
         });
     }
     let planes = if planar { samples } else { 1 };
-    let wanted =
-        rows.div_ceil(chunk.0).checked_mul(stored(columns).div_ceil(chunk.1)).and_then(|c| c.checked_mul(planes));
+    let wanted = rows
+        .div_ceil(chunk.0)
+        .checked_mul(stored(columns).div_ceil(chunk.1))
+        .and_then(|c| c.checked_mul(planes));
     let offsets = d.integers(index, where_tag)?;
     let mut counts = d.integers(index, count_tag)?;
     if wanted != Some(offsets.len()) {
