@@ -1,5 +1,6 @@
 //! The command line: one file a command; parses, calls the library, prints. No numerics.
 
+mod audit;
 mod common;
 mod demo;
 mod describe;
@@ -39,6 +40,8 @@ enum Command {
     Move(r#move::Arguments),
     /// Several rasters onto one grid: the main job
     Unify(unify::Arguments),
+    /// Check a resampling done by anyone: signal, displacement, blur, gaps
+    Audit(audit::Arguments),
     /// What is in a file: grid, samples, missing, statistics
     Describe(describe::Arguments),
     /// The kernels, with support, order, regularity and poles
@@ -65,6 +68,7 @@ pub fn main() -> ExitCode {
         Command::Rescale(a) => rescale::run(&a),
         Command::Move(a) => r#move::run(&a),
         Command::Unify(a) => unify::run(&a),
+        Command::Audit(a) => audit::run(&a),
         Command::Describe(a) => describe::run(&a),
         Command::Kernels(a) => kernels::run(&a),
         Command::Replay(a) => replay::run(&a),

@@ -147,7 +147,13 @@ fn place_by_map(path: &Path, grid: &Grid, file: &MapFile, first: &Grid) -> Resul
 }
 
 /// From target positions to positions in the raster.
-fn way_back(path: &Path, grid: &Grid, file: Option<&MapFile>, target: &Grid, name: &str) -> Result<Map> {
+pub(super) fn way_back(
+    path: &Path,
+    grid: &Grid,
+    file: Option<&MapFile>,
+    target: &Grid,
+    name: &str,
+) -> Result<Map> {
     let Some(file) = file else {
         target.check_same_crs(grid, (name, &path.display().to_string()))?;
         if target.world.is_some() && grid.world.is_none() {

@@ -1,9 +1,11 @@
 //! A job: what a command becomes. It is run, written into the ledger, and replayed from there.
 
 mod account;
+mod audit;
 mod costs;
 mod describe;
 
+pub use audit::{AuditRules, AuditValues, MAX_DISPLACEMENT, audit, audit_files, relate};
 pub use describe::{BandStatistics, describe};
 
 use crate::error::{Error, Result};

@@ -134,7 +134,10 @@ impl ClosureMap {
         let worst = there.iter().fold(0.0f64, |a, c| a.max((c - typical).abs()));
         let kind = if total.abs() < SMALL && typical.abs() < SMALL && worst < (10.0 * spread).max(0.02) {
             LossKind::None
-        } else if typical.abs() > SMALL && spread < 0.3 * typical.abs() && (total - typical).abs() < 0.3 * typical.abs() {
+        } else if typical.abs() > SMALL
+            && spread < 0.3 * typical.abs()
+            && (total - typical).abs() < 0.3 * typical.abs()
+        {
             LossKind::Even
         } else {
             // The fewest cells that hold nine tenths of all that stands out.
@@ -153,6 +156,7 @@ impl ClosureMap {
                 held += excess(i);
                 cells.push([i / self.columns, i % self.columns]);
             }
+            cells.sort_unstable();
             let few = 4 * cells.len() <= there.len().max(4);
             if !cells.is_empty() && few && all > 0.5 * moved.min(total.abs().max(SMALL)) {
                 LossKind::Local

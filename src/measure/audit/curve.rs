@@ -110,10 +110,8 @@ impl Curve {
         }
         // Beyond what could be judged a Gaussian goes on as one.
         let beyond = (is_gaussian && crossing.is_none()).then(|| (2f64.ln() / 2.0).sqrt() / (PI * sigma));
-        let axes_differ_by = self
-            .judged()
-            .filter_map(|r| Some((r.rows? - r.columns?).abs() / gain))
-            .fold(0.0, f64::max);
+        let axes_differ_by =
+            self.judged().filter_map(|r| Some((r.rows? - r.columns?).abs() / gain)).fold(0.0, f64::max);
         Some(Sharpness {
             gain,
             transfer: [0.10, 0.25, 0.40].map(|f| self.at(f, gain).map(|t| t.max(0.0))),
@@ -155,10 +153,8 @@ impl Curve {
             xy += w * x * y;
         }
         let q = if xx > 0.0 { (-xy / xx).max(0.0) } else { 0.0 };
-        let squares: f64 = used
-            .iter()
-            .map(|r| (r.transfer / gain - (-q * r.frequency * r.frequency).exp()).powi(2))
-            .sum();
+        let squares: f64 =
+            used.iter().map(|r| (r.transfer / gain - (-q * r.frequency * r.frequency).exp()).powi(2)).sum();
         ((q / 2.0).sqrt() / PI, (squares / used.len().max(1) as f64).sqrt())
     }
 }
@@ -211,7 +207,10 @@ mod tests {
         let gauss = |s: f64| move |f: f64| 0.8 * (-2.0 * (PI * s * f).powi(2)).exp();
         for (sigma, upto) in [(1.5, 0.5), (1.5, 0.16), (0.6, 0.2)] {
             let Some(s) = curve(0.5, upto, gauss(sigma)).sharpness() else { panic!("judged") };
-            assert!((s.gaussian_sigma / sigma - 1.0).abs() < 1e-3 && s.is_gaussian && (s.gain - 0.8).abs() < 1e-3, "{s:?}");
+            assert!(
+                (s.gaussian_sigma / sigma - 1.0).abs() < 1e-3 && s.is_gaussian && (s.gain - 0.8).abs() < 1e-3,
+                "{s:?}"
+            );
             // exp(-2 (pi sigma f)^2) = 1/2.
             assert!((s.mtf50 - (2f64.ln() / 2.0).sqrt() / (PI * sigma)).abs() < 2e-3, "{s:?}");
             let at = s.transfer[0].unwrap_or(f64::NAN);

@@ -93,8 +93,7 @@ impl Splines {
         };
         let (row_start, column_start) = (first(rows, top, h)?, first(columns, left, w)?);
         let width = columns.len();
-        let mut out =
-            Moved { values: Vec::new(), down: Vec::new(), right: Vec::new() };
+        let mut out = Moved { values: Vec::new(), down: Vec::new(), right: Vec::new() };
         let (mut line, mut slope) = (vec![0.0; width + TAPS - 1], vec![0.0; width + TAPS - 1]);
         for r in 0..rows.len() {
             line.fill(0.0);
@@ -123,9 +122,11 @@ impl Splines {
 /// A Gaussian of standard deviation `sigma` (rows, columns; pixels), over the patch with its rim repeated outwards.
 pub fn blur(patch: &Array2<f64>, sigma: (f64, f64)) -> Array2<f64> {
     let once = |from: &Array2<f64>, sigma: f64| -> Array2<f64> {
+        if !(sigma > 1e-3) {
+            return from.clone();
+        }
         let reach = (4.0 * sigma).ceil() as i64;
-        let weights: Vec<f64> =
-            (-reach..=reach).map(|k| (-0.5 * (k as f64 / sigma).powi(2)).exp()).collect();
+        let weights: Vec<f64> = (-reach..=reach).map(|k| (-0.5 * (k as f64 / sigma).powi(2)).exp()).collect();
         let sum: f64 = weights.iter().sum();
         let (h, w) = from.dim();
         let mut out = Array2::zeros((h, w));

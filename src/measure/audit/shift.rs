@@ -1,12 +1,13 @@
 //! The shift between two patches, to a hundredth of a pixel and better.
 //!
 //! First the peak of the cross-correlation of both (windowed, by the discrete Fourier transform) to a whole pixel; then
-//! least squares with gain and offset free, by Gauss and Newton on a spline. Both patches are blurred alike first. A
-//! symmetric blur that only one of them suffered does not bias the answer: at the true shift the errors that it leaves
-//! are even, and what the least squares look for is odd. Covariance after Robinson and Milanfar 2004, IEEE Trans. Image
+//! windowed least squares by Gauss and Newton on a spline, with gain, offset and a little blur along either axis (second
+//! differences) free. Both patches are blurred alike first. A symmetric blur that only one of them suffered does not bias
+//! the answer: at the true shift the errors that it leaves are even, and what the least squares look for is odd. Covariance
+//! after Robinson and Milanfar 2004, IEEE Trans. Image
 //! Process. 13(9):1185-1199, with the residuals' variance in the place of the noise's.
 
-use super::patch::{Splines, TAPS, blur};
+use super::patch::{Spline, Splines, TAPS, blur};
 use super::solve::{invert, solve};
 use crate::error::Result;
 use ndarray::Array2;
@@ -53,6 +54,9 @@ pub struct Estimator {
     inverse: (Arc<dyn Fft<f64>>, Arc<dyn Fft<f64>>),
 }
 
+/// Why no shift was found, and how far the search got where it was still on its way.
+type Stuck = (NoVote, Option<(f64, f64)>);
+
 /// Correlation below which two patches do not show the same.
 const LEAST_CORRELATION: f64 = 0.5;
 
@@ -97,21 +101,49 @@ impl Estimator {
         if !(power.sqrt() > 1e-9 * largest) {
             return Err(NoVote::Flat);
         }
-        let spline = self.splines.spline(&before);
         let mut from = self.coarse(&after, &before);
-        let mut last = NoVote::Unlike;
-        for _ in 0..4 {
-            match self.refine(&after, &spline, from) {
-                Ok(found) => return Ok(found),
-                // It ran out of the room around the guess: guess anew from where it got to.
-                Err((NoVote::Unlike, Some(at))) => from = at,
-                Err((why, _)) => {
-                    last = why;
-                    break;
+        let (mut after, mut before) = (after, before);
+        let mut round = 0;
+        let mut tries = 0;
+        loop {
+            match self.refine(&after, &self.splines_of(&before), from) {
+                Ok((found, variance)) => {
+                    let coarse = (self.sigma.0 / 0.8, self.sigma.1 / 0.8);
+                    let differ =
+                        (variance.0 / coarse.0.powi(2)).abs().max((variance.1 / coarse.1.powi(2)).abs());
+                    if round == 2 || differ < 0.03 {
+                        return Ok(found);
+                    }
+                    // Second differences tell little blurs alone: a larger one is done to the sharper patch, then asked again.
+                    let part = |v: f64, unit: f64| v.max(0.0).min(9.0 * unit * unit).sqrt();
+                    before = blur(&before, (part(variance.0, coarse.0), part(variance.1, coarse.1)));
+                    after = blur(&after, (part(-variance.0, coarse.0), part(-variance.1, coarse.1)));
+                    from = found.by;
+                    round += 1;
                 }
+                // It ran out of the room around the guess: guess anew from where it got to.
+                Err((NoVote::Unlike, Some(at))) if tries < 4 => {
+                    from = at;
+                    tries += 1;
+                }
+                Err((why, _)) => return Err(why),
             }
         }
-        Err(last)
+    }
+
+    /// The patch and its second differences along rows and columns, as splines.
+    fn splines_of(&self, patch: &Array2<f64>) -> [Spline; 3] {
+        let (h, w) = self.size;
+        let curved = |axis: usize| {
+            Array2::from_shape_fn(self.size, |(r, c)| {
+                let at = |k: i64| {
+                    let step = |i: usize, n: usize| (i as i64 + k).clamp(0, n as i64 - 1) as usize;
+                    if axis == 0 { patch[(step(r, h), c)] } else { patch[(r, step(c, w))] }
+                };
+                at(1) + at(-1) - 2.0 * at(0)
+            })
+        };
+        [self.splines.spline(patch), self.splines.spline(&curved(0)), self.splines.spline(&curved(1))]
     }
 
     /// The whole-pixel peak of the cross-correlation, at most a quarter of the patch away.
@@ -119,8 +151,9 @@ impl Estimator {
         let (h, w) = self.size;
         let hann = |i: usize, n: usize| (PI * (i as f64 + 0.5) / n as f64).sin().powi(2);
         let spectrum = |patch: &Array2<f64>| {
-            let mut s =
-                Array2::from_shape_fn((h, w), |(r, c)| Complex64::new(patch[(r, c)] * hann(r, h) * hann(c, w), 0.0));
+            let mut s = Array2::from_shape_fn((h, w), |(r, c)| {
+                Complex64::new(patch[(r, c)] * hann(r, h) * hann(c, w), 0.0)
+            });
             transform(&mut s, &self.forward);
             s
         };
@@ -147,13 +180,14 @@ impl Estimator {
         if high > low { low as usize..high as usize } else { 0..0 }
     }
 
-    /// Gauss-Newton from a guess. Fails with the place it got to where that is too far from the guess.
+    /// Gauss-Newton from a guess: the shift, and by how much the variance of AFTER's blur along rows and columns is larger.
+    /// Fails with the place it got to where that is too far from the guess.
     fn refine(
         &self,
         after: &Array2<f64>,
-        before: &super::patch::Spline,
+        splines: &[Spline; 3],
         guess: (f64, f64),
-    ) -> Result<Shift, (NoVote, Option<(f64, f64)>)> {
+    ) -> Result<(Shift, (f64, f64)), Stuck> {
         let rows = self.room(self.size.0, self.margin.0, guess.0);
         let columns = self.room(self.size.1, self.margin.1, guess.1);
         if rows.len() * columns.len() < 64 {
@@ -161,59 +195,54 @@ impl Estimator {
         }
         let target: Vec<f64> =
             rows.clone().flat_map(|r| columns.clone().map(move |c| (r, c))).map(|p| after[p]).collect();
-        let (mut s, mut gain, mut offset) = (guess, 1.0, 0.0);
-        let mut first = true;
+        // Under a Hann window what enters and leaves at the rim counts little.
+        let hann = |n: usize| -> Vec<f64> {
+            (0..n).map(|i| (PI * (i as f64 + 0.5) / n as f64).sin().powi(2)).collect()
+        };
+        let (down, across) = (hann(rows.len()), hann(columns.len()));
+        let weights: Vec<f64> = down.iter().flat_map(|d| across.iter().map(move |a| d * a)).collect();
+        let mut s = guess;
+        // Gain, offset, and blur along rows and columns.
+        let mut shape: Option<[f64; 4]> = None;
         for _ in 0..40 {
-            let Some(m) = self.splines.moved(before, s, &rows, &columns) else {
-                return Err((NoVote::Unlike, None));
+            let moved = |spline| self.splines.moved(spline, s, &rows, &columns).ok_or((NoVote::Unlike, None));
+            let (m, rr, cc) = (moved(&splines[0])?, moved(&splines[1])?.values, moved(&splines[2])?.values);
+            let [gain, offset, br, bc] = match shape {
+                Some(shape) => shape,
+                None => start(&target, &m.values, &weights).ok_or((NoVote::Flat, None))?,
             };
-            let n = target.len() as f64;
-            if first {
-                // Gain and offset first: a wrong contrast would send the first step astray.
-                let mean = |v: &[f64]| v.iter().sum::<f64>() / n;
-                let (mt, mm) = (mean(&target), mean(&m.values));
-                let cross: f64 = target.iter().zip(&m.values).map(|(t, v)| (t - mt) * (v - mm)).sum();
-                let own: f64 = m.values.iter().map(|v| (v - mm) * (v - mm)).sum();
-                if !(own > 0.0) {
-                    return Err((NoVote::Flat, None));
-                }
-                gain = if cross > 0.0 { cross / own } else { 1.0 };
-                offset = mt - gain * mm;
-                first = false;
-            }
-            // Unknowns: shift down, shift right, gain, offset.
-            let mut normal = [[0.0; 4]; 4];
-            let mut right_side = [0.0; 4];
-            let mut squares = 0.0;
+            // Unknowns: shift down, shift right, gain, offset, blur along rows, blur along columns.
+            let mut sums = Normal::default();
             for (i, t) in target.iter().enumerate() {
-                let slope = [-gain * m.down[i], -gain * m.right[i], m.values[i], 1.0];
-                let residual = t - gain * m.values[i] - offset;
-                squares += residual * residual;
-                for a in 0..4 {
-                    right_side[a] += slope[a] * residual;
-                    for b in a..4 {
-                        normal[a][b] += slope[a] * slope[b];
-                    }
-                }
+                let slope = [-gain * m.down[i], -gain * m.right[i], m.values[i], 1.0, rr[i], cc[i]];
+                sums.add(&slope, t - gain * m.values[i] - offset - br * rr[i] - bc * cc[i], weights[i]);
             }
-            for a in 0..4 {
-                for b in 0..a {
-                    normal[a][b] = normal[b][a];
-                }
+            let mut sums = sums.whole();
+            // A lean towards no blur, too weak to be seen: a single wave cannot tell blur from gain.
+            for (k, blur) in [(4, br), (5, bc)] {
+                let lean = 1e-4 * sums.matrix[k][k];
+                sums.matrix[k][k] += lean;
+                sums.right_side[k] -= lean * blur;
             }
-            if !has_texture(&normal) {
+            if !has_texture(&sums.matrix) {
                 return Err((NoVote::Flat, None));
             }
-            let Some(step) = solve(&normal, &right_side) else { return Err((NoVote::Flat, None)) };
+            let Some(step) = solve(&sums.matrix, &sums.right_side) else { return Err((NoVote::Flat, None)) };
             let length = step[0].hypot(step[1]);
-            if length < 1e-7 {
-                return self.told(s, gain, &normal, squares, &target);
+            if length < 1e-7 && shape.is_some() {
+                // A Gaussian of variance v adds v / 2 of the second derivative.
+                let variance = (2.0 * br / gain, 2.0 * bc / gain);
+                return self.told(s, gain, &sums, &target, &weights).map(|shift| (shift, variance));
             }
             // Long steps go beyond what the slope tells.
             let damped = (1.0 / length).min(1.0);
             s = (s.0 + damped * step[0], s.1 + damped * step[1]);
-            gain += damped * step[2];
-            offset += damped * step[3];
+            shape = Some([
+                gain + damped * step[2],
+                offset + damped * step[3],
+                br + damped * step[4],
+                bc + damped * step[5],
+            ]);
             if (s.0 - guess.0).abs() > 1.9 || (s.1 - guess.1).abs() > 1.9 {
                 return Err((NoVote::Unlike, Some(s)));
             }
@@ -225,25 +254,33 @@ impl Estimator {
         &self,
         by: (f64, f64),
         gain: f64,
-        normal: &[[f64; 4]; 4],
-        squares: f64,
+        sums: &Normal,
         target: &[f64],
-    ) -> Result<Shift, (NoVote, Option<(f64, f64)>)> {
-        let n = target.len() as f64;
-        let mean = target.iter().sum::<f64>() / n;
-        let total: f64 = target.iter().map(|t| (t - mean) * (t - mean)).sum();
-        let correlation = (1.0 - squares / total.max(f64::MIN_POSITIVE)).max(0.0).sqrt();
+        weights: &[f64],
+    ) -> Result<Shift, Stuck> {
+        let total = weights.iter().sum::<f64>();
+        let mean = target.iter().zip(weights).map(|(t, w)| t * w).sum::<f64>() / total;
+        let power: f64 = target.iter().zip(weights).map(|(t, w)| w * (t - mean) * (t - mean)).sum();
+        let correlation = (1.0 - sums.squares / power.max(f64::MIN_POSITIVE)).max(0.0).sqrt();
         if !(correlation > LEAST_CORRELATION) || gain <= 0.0 {
             return Err((NoVote::Unlike, None));
         }
-        let inverse = invert(normal).ok_or((NoVote::Flat, None))?;
+        let inverse = invert(&sums.matrix).ok_or((NoVote::Flat, None))?;
         // The blur ties neighbouring residuals together: so many fewer of them speak for themselves.
         let tied = (4.0 * PI * self.sigma.0 * self.sigma.1).max(1.0);
-        let variance = squares / (n - 4.0).max(1.0) * tied;
-        let covariance = [
-            [variance * inverse[0][0], variance * inverse[0][1]],
-            [variance * inverse[1][0], variance * inverse[1][1]],
-        ];
+        let variance = sums.squares / total * tied;
+        // Least squares with weights that are a window and no inverse variances: N^-1 (sum w^2 j j^T) N^-1.
+        let covariance: [[f64; 2]; 2] = std::array::from_fn(|a| {
+            std::array::from_fn(|b| {
+                let mut sum = 0.0;
+                for i in 0..UNKNOWNS {
+                    for j in 0..UNKNOWNS {
+                        sum += inverse[a][i] * sums.squared[i][j] * inverse[j][b];
+                    }
+                }
+                variance * sum
+            })
+        });
         // Along an axis without texture the error is as large as what is asked for.
         let coarse = (self.sigma.0 / 0.8, self.sigma.1 / 0.8);
         if covariance[0][0].sqrt() > 0.25 * coarse.0 || covariance[1][1].sqrt() > 0.25 * coarse.1 {
@@ -253,9 +290,64 @@ impl Estimator {
     }
 }
 
+/// Shift (2), gain, offset, blur (2).
+const UNKNOWNS: usize = 6;
+
+/// The normal equations of windowed least squares.
+#[derive(Default)]
+struct Normal {
+    matrix: [[f64; UNKNOWNS]; UNKNOWNS],
+    /// The same with squared weights.
+    squared: [[f64; UNKNOWNS]; UNKNOWNS],
+    right_side: [f64; UNKNOWNS],
+    /// Weighted sum of squared residuals.
+    squares: f64,
+}
+
+impl Normal {
+    #[inline(always)]
+    fn add(&mut self, slope: &[f64; UNKNOWNS], residual: f64, weight: f64) {
+        self.squares += weight * residual * residual;
+        for a in 0..UNKNOWNS {
+            let scaled = weight * slope[a];
+            self.right_side[a] += scaled * residual;
+            for b in a..UNKNOWNS {
+                let product = scaled * slope[b];
+                self.matrix[a][b] += product;
+                self.squared[a][b] += weight * product;
+            }
+        }
+    }
+
+    /// With the lower triangles filled in.
+    fn whole(mut self) -> Self {
+        for a in 0..UNKNOWNS {
+            for b in 0..a {
+                self.matrix[a][b] = self.matrix[b][a];
+                self.squared[a][b] = self.squared[b][a];
+            }
+        }
+        self
+    }
+}
+
+/// Gain and offset before the first step: a wrong contrast would send it astray. `None` where the patch is flat.
+fn start(target: &[f64], values: &[f64], weights: &[f64]) -> Option<[f64; 4]> {
+    let total: f64 = weights.iter().sum();
+    let mean = |v: &[f64]| v.iter().zip(weights).map(|(v, w)| v * w).sum::<f64>() / total;
+    let (mt, mv) = (mean(target), mean(values));
+    let (mut cross, mut own) = (0.0, 0.0);
+    for ((t, v), w) in target.iter().zip(values).zip(weights) {
+        cross += w * (t - mt) * (v - mv);
+        own += w * (v - mv) * (v - mv);
+    }
+    let gain = if cross > 0.0 { cross / own } else { 1.0 };
+    (own > 0.0).then(|| [gain, mt - gain * mv, 0.0, 0.0])
+}
+
 /// Whether a shift along either axis changes the patch in a way that no gain and no offset does: the weaker direction must
 /// hold more than rounding of all slopes.
-fn has_texture(normal: &[[f64; 4]; 4]) -> bool {
+fn has_texture(normal: &[[f64; UNKNOWNS]; UNKNOWNS]) -> bool {
     const LEAST: f64 = 1e-8;
     let Some(inverse) = invert(normal) else { return false };
     let (a, b, d) = (inverse[0][0], inverse[0][1], inverse[1][1]);
@@ -297,9 +389,8 @@ mod tests {
         let Ok(estimator) = Estimator::new(size, (0.8, 0.8)) else { panic!("kernels") };
         let before = Array2::from_shape_fn(size, |(r, c)| 1000.0 + texture(r as f64, c as f64, 0.0));
         for (dr, dc) in [(0.0, 0.0), (0.5, -0.5), (-0.25, 3.4), (-7.6, 5.1)] {
-            let after = Array2::from_shape_fn(size, |(r, c)| {
-                40.0 + 0.7 * texture(r as f64 - dr, c as f64 - dc, 1.2)
-            });
+            let after =
+                Array2::from_shape_fn(size, |(r, c)| 40.0 + 0.7 * texture(r as f64 - dr, c as f64 - dc, 1.2));
             let s = estimator.measure(&after, &before).unwrap_or(Shift {
                 by: (f64::NAN, 0.0),
                 covariance: [[0.0; 2]; 2],

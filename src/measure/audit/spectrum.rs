@@ -44,7 +44,9 @@ impl Known {
             None => Complex64::new(continuous(x), 0.0),
             // All pixels look with one phase: the images of the spectrum fall onto it.
             Some(s) => (-4..=4)
-                .map(|k| Complex64::from_polar(1.0, 2.0 * PI * f64::from(k) * s) * continuous(x + f64::from(k)))
+                .map(|k| {
+                    Complex64::from_polar(1.0, 2.0 * PI * f64::from(k) * s) * continuous(x + f64::from(k))
+                })
                 .sum(),
         };
         sum / discrete
@@ -222,10 +224,12 @@ impl Spectra {
             .map(|s| {
                 let all = &s[0];
                 let ratio = |p: &Part| (p.before > 0.0).then(|| p.cross.re / p.before);
-                let coherence = (all.plain.norm_sqr() / (all.before * all.after).max(f64::MIN_POSITIVE)).min(1.0);
+                let coherence =
+                    (all.plain.norm_sqr() / (all.before * all.after).max(f64::MIN_POSITIVE)).min(1.0);
                 // Neighbouring bins under the window tell much the same: 4 of them count once, and so do the two halves.
                 let independent = (all.bins * self.patches as f64 / 8.0).max(1.0);
-                let error = ((1.0 - coherence) * all.after / all.before / (2.0 * independent)).max(0.0).sqrt();
+                let error =
+                    ((1.0 - coherence) * all.after / all.before / (2.0 * independent)).max(0.0).sqrt();
                 let power = all.before / all.bins;
                 Ring {
                     frequency: all.frequency / all.before,

@@ -51,8 +51,13 @@ pub fn judge(field: &Field, back: &Map, before: (usize, usize), after: (usize, u
     let c = field.at_centre;
     let bound = (4.0 * field.sigma).max(0.02);
     if field.scatter > 0.1 && field.scatter > 6.0 * field.sigma {
-        let words = format!("an irregular field: tiles scatter by {:.2} px about the best linear one", field.scatter);
-        return verdict(Kind::Irregular, words, Some("a map that bends, or content that changed between the two"));
+        let words =
+            format!("an irregular field: tiles scatter by {:.2} px about the best linear one", field.scatter);
+        return verdict(
+            Kind::Irregular,
+            words,
+            Some("a map that bends, or content that changed between the two"),
+        );
     }
     if field.is_uneven() {
         return uneven(field, back, after, corner_centres, verdict);
@@ -63,10 +68,15 @@ pub fn judge(field: &Field, back: &Map, before: (usize, usize), after: (usize, u
     let step = steps(back);
     let names: Vec<Slip> = [0, 1].iter().map(|&k| slip(c[k], step[k], bound.max(LIKE))).collect();
     let axis = ["rows", "columns"];
-    let named: Vec<usize> = [0, 1].into_iter().filter(|k| !matches!(names[*k], Slip::None | Slip::Other)).collect();
+    let named: Vec<usize> =
+        [0, 1].into_iter().filter(|k| !matches!(names[*k], Slip::None | Slip::Other)).collect();
     let other = names.contains(&Slip::Other);
     if named.is_empty() || other {
-        return verdict(Kind::Constant, "a constant slip of no usual size".into(), Some("a wrong origin or shift"));
+        return verdict(
+            Kind::Constant,
+            "a constant slip of no usual size".into(),
+            Some("a wrong origin or shift"),
+        );
     }
     let words = match (&named[..], names[0] == names[1]) {
         ([_, _], true) => format!("a constant slip of {} on both axes", names[0].words()),
@@ -77,7 +87,8 @@ pub fn judge(field: &Field, back: &Map, before: (usize, usize), after: (usize, u
             names[1].words()
         ),
     };
-    let half = named.iter().any(|k| matches!(names[*k], Slip::HalfInput | Slip::HalfOutput | Slip::FirstCentres));
+    let half =
+        named.iter().any(|k| matches!(names[*k], Slip::HalfInput | Slip::HalfOutput | Slip::FirstCentres));
     let cause = if half {
         "pixel centres were taken for pixel edges, or an area grid was read as points (or the other way round)"
     } else {
@@ -117,7 +128,9 @@ fn uneven(
                 return verdict(
                     Kind::Scale,
                     words,
-                    Some("the centres of the corner pixels were aligned instead of the outer edges, as scipy.ndimage.zoom does by default"),
+                    Some(
+                        "the centres of the corner pixels were aligned instead of the outer edges, as scipy.ndimage.zoom does by default",
+                    ),
                 );
             }
             words += &format!(
@@ -125,7 +138,10 @@ fn uneven(
                 predicted[0], predicted[1], found.0, found.1
             );
         }
-        let rounding = (g[0][0] / h[0].max(0.5) * back_extent(back, after).0, g[1][1] / h[1].max(0.5) * back_extent(back, after).1);
+        let rounding = (
+            g[0][0] / h[0].max(0.5) * back_extent(back, after).0,
+            g[1][1] / h[1].max(0.5) * back_extent(back, after).1,
+        );
         let cause = if rounding.0.abs().max(rounding.1.abs()) < 1.5 {
             "a factor that was rounded to whole pixels, or a pixel size that is slightly wrong"
         } else {
@@ -141,7 +157,9 @@ fn uneven(
     if is_turn {
         // Right (0, 1) goes up for a counter-clockwise turn.
         let degrees = (0.5 * (shear_c - shear_r)).to_degrees();
-        let words = format!("a turn: content is turned by {degrees:+.3} degrees (+ = counter-clockwise as displayed)");
+        let words = format!(
+            "a turn: content is turned by {degrees:+.3} degrees (+ = counter-clockwise as displayed)"
+        );
         return verdict(Kind::Turn, words, Some("a wrong angle, or a turn about another place"));
     }
     verdict(
@@ -198,7 +216,10 @@ impl Slip {
             Slip::None => "nothing".into(),
             Slip::HalfInput => "half an input pixel".into(),
             Slip::HalfOutput => "half an output pixel".into(),
-            Slip::FirstCentres => "half the difference of both pixel sizes (first pixels' centres aligned instead of edges)".into(),
+            Slip::FirstCentres => {
+                "half the difference of both pixel sizes (first pixels' centres aligned instead of edges)"
+                    .into()
+            }
             Slip::Whole(1) => "one input pixel".into(),
             Slip::Whole(n) => format!("{n} input pixels"),
             Slip::Other => "no usual size".into(),
@@ -231,7 +252,15 @@ mod tests {
 
     fn field(at_centre: [f64; 2], gradient: [[f64; 2]; 2]) -> Field {
         let extent = Extent { middle: [49.5, 49.5], half: [50.0, 50.0] };
-        Field { at_centre, gradient, sigma: 1e-3, gradient_sigma: 1e-3, scatter: 2e-3, has_gradient: true, extent }
+        Field {
+            at_centre,
+            gradient,
+            sigma: 1e-3,
+            gradient_sigma: 1e-3,
+            scatter: 2e-3,
+            has_gradient: true,
+            extent,
+        }
     }
 
     #[test]
@@ -241,7 +270,10 @@ mod tests {
         let told = |f: &Field| judge(f, &double, (100, 100), (200, 200));
         assert_eq!(told(&field([0.01, -0.005], none)).kind, Kind::None);
         let half = told(&field([0.5, 0.5], none));
-        assert!(half.kind == Kind::Constant && half.words.contains("half an input pixel on both axes"), "{half:?}");
+        assert!(
+            half.kind == Kind::Constant && half.words.contains("half an input pixel on both axes"),
+            "{half:?}"
+        );
         let quarter = told(&field([0.0, -0.25], none));
         assert!(quarter.words.contains("half an output pixel along columns only"), "{quarter:?}");
         assert!(told(&field([-2.0, 0.0], none)).words.contains("2 input pixels"));
