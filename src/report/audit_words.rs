@@ -152,7 +152,7 @@ impl Audit {
         let uneven = 0.1;
         if s.axes_differ_by > uneven {
             lines.push(format!(
-                "blur: unlike along rows and columns, by up to {:.0} % of detail",
+                "blur: unlike along rows and columns, by {:.0} % of detail (root mean square over frequency)",
                 100.0 * s.axes_differ_by
             ));
         }
@@ -177,7 +177,7 @@ impl Audit {
                 100.0 * fraction
             ));
         }
-        if a.other_share > 0.02 {
+        if a.other_share > 0.05 {
             lines.push(format!(
                 "noise: {:.1} % of AFTER's detail has no origin in BEFORE (noise, rounding, artefacts)",
                 100.0 * a.other_share

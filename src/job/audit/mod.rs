@@ -10,8 +10,8 @@ use crate::error::{Error, Result};
 use crate::map::Map;
 use crate::raster::{self, Header, MissingCodes, Source};
 use crate::report::{
-    Audit, AuditPixels, Centroid, Check, Flux, MeasuredBlur, MeasuredDisplacement, MeasuredTransfer,
-    RasterEntry, Relation, Spectrum, Time, peak_memory_bytes,
+    Audit, AuditPixels, Centroid, Check, DisplacementField, Flux, MeasuredBlur, MeasuredDisplacement,
+    MeasuredTransfer, RasterEntry, Relation, Spectrum, Time, peak_memory_bytes,
 };
 use read::{Bringer, Side, survey};
 use serde::{Deserialize, Serialize};
@@ -43,8 +43,8 @@ pub struct AuditRules {
     pub missing: Option<f64>,
     /// Bound on |closure|; `None`: not checked.
     pub tolerance: Option<f64>,
-    /// Bound on the largest displacement, input pixels; `None`: [`MAX_DISPLACEMENT`], held as well where nothing could be
-    /// measured.
+    /// Bound on the largest displacement, input pixels; `None`: [`MAX_DISPLACEMENT`], which is not held against rasters
+    /// without texture.
     pub max_displacement: Option<f64>,
     /// Least mtf50, cycles per input pixel; `None`: not checked.
     pub min_mtf50: Option<f64>,
@@ -189,7 +189,7 @@ pub fn audit(
     let [centroid_before, centroid_after] = sums.centroids();
     let all = pixels(&a) * a.bands.len() as u64;
     let clipping = sums.clipping;
-    let checks = checks(rules, closure, displacement_field.largest, sharp.map(|s| s.mtf50));
+    let checks = checks(rules, closure, &displacement_field, sharp.map(|s| s.mtf50));
     let middle = displacement_field.field.map(|f| (f.at_centre, f.sigma));
     let seconds = started.elapsed().as_secs_f64();
     Ok(Audit {
@@ -317,7 +317,7 @@ fn sides<'a>(
 fn checks(
     rules: &AuditRules,
     closure: Option<f64>,
-    displacement: Option<f64>,
+    displacement: &DisplacementField,
     mtf50: Option<f64>,
 ) -> Vec<Check> {
     let mut out = Vec::new();
@@ -328,8 +328,11 @@ fn checks(
     }
     let asked = rules.max_displacement.is_some();
     let bound = rules.max_displacement.unwrap_or(MAX_DISPLACEMENT);
-    let held = displacement.map(|d| d <= bound).or(asked.then_some(false));
-    out.push(Check { name: "displacement".into(), value: displacement, bound, asked, held });
+    // Where most tiles that could tell find nothing alike, content is anywhere but where it should be.
+    let lost = displacement.unlike > displacement.voted;
+    let value = displacement.largest.filter(|_| !lost);
+    let held = value.map(|d| d <= bound).or((asked || lost).then_some(false));
+    out.push(Check { name: "displacement".into(), value, bound, asked, held });
     if let Some(bound) = rules.min_mtf50 {
         let held = Some(mtf50.is_some_and(|m| m >= bound));
         out.push(Check { name: "mtf50".into(), value: mtf50, bound, asked: true, held });

@@ -5,6 +5,7 @@ use super::super::{Progress, reading_windows};
 use crate::error::{Error, Result};
 use crate::kernel::{Extension, Kernel};
 use crate::map::Map;
+use crate::measure::audit::{Field, Known};
 use crate::raster::{Digest, Header, MissingCodes, Raster, SampleType, Samples, Source, Window};
 use crate::resample::{Engine, Outside, Plan, Reduce, Rules};
 use crate::with_samples;
@@ -234,6 +235,24 @@ const REACH: f64 = 28.0;
 const NEAR: f64 = 6.0;
 
 impl Bringer<'_> {
+    /// The same, with a displacement undone on the way.
+    pub fn corrected(&self, field: Option<&Field>) -> Self {
+        let back = field.map_or(self.back, |f| self.back.then(&f.undone()));
+        Bringer { back, ..*self }
+    }
+
+    /// What is known of the transfer of the spline that brings BEFORE onto AFTER's grid.
+    pub fn known(&self, kernel: &Kernel) -> Known {
+        let phase = |(step, offset): (f64, f64)| (step.abs() == 1.0).then(|| offset - offset.floor());
+        let axes = self.back.as_axes().filter(|a| !a.swapped);
+        Known {
+            symbol: kernel.symbol(),
+            degree: 9,
+            stretch: self.stretch,
+            phase: axes.map_or((None, None), |a| (phase(a.rows), phase(a.columns))),
+        }
+    }
+
     /// Refuses patches that would not fit the memory, with all threads at work.
     pub fn check(&self, patch: (usize, usize)) -> Result<()> {
         let j = self.back.jacobian(0.0, 0.0);

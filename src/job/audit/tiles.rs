@@ -6,7 +6,8 @@ use crate::error::{Error, Result};
 use crate::kernel::Kernel;
 use crate::map::Map;
 use crate::measure::audit::{
-    Aliasing, Curve, Estimator, Extent, Field, Kind, Known, NoVote, Spectra, Verdict, Vote, fit, judge,
+    Aliasing, Curve, Estimator, Extent, Field, Kind, NoVote, Spectra, Verdict, Vote, fit, judge,
+    predict_corner_centres,
 };
 use crate::raster::Window;
 use crate::report::{DisplacementField, Tile};
@@ -92,6 +93,16 @@ impl<'a> Tiling<'a> {
         Ok((axis(b.rows, size.0), axis(b.columns, size.1)))
     }
 
+    /// Input pixels per pixel of AFTER along the axis where they are more, at least 1.
+    fn coarsest(&self) -> f64 {
+        self.bringer.stretch.0.max(self.bringer.stretch.1)
+    }
+
+    /// Whether pixels grow by more than can be left out of account.
+    fn grows(&self) -> bool {
+        self.coarsest() > 1.05
+    }
+
     fn after(&self, window: &Window) -> Result<Array2<f64>> {
         let mut patch = self.after.plane(self.after_band, window)?;
         if self.scale != 1.0 {
@@ -137,39 +148,93 @@ impl<'a> Tiling<'a> {
         self.bringer.check((r.length, c.length))?;
         let estimator = Estimator::new((r.length, c.length), sigma)?;
         let kernel = Kernel::parse("bspline:5")?;
-        let found: Vec<Result<Tile>> = windows(&r, &c)
-            .into_par_iter()
-            .map(|window| {
-                if progress.stopped() {
-                    return Err(Error::Stopped);
+        let tiles = windows(&r, &c);
+        let look = |way: Reduce, undone: Option<&Field>| -> Result<Vec<Tile>> {
+            let bringer = self.bringer.corrected(undone);
+            let found: Vec<Result<Tile>> = tiles
+                .par_iter()
+                .map(|window| {
+                    if progress.stopped() {
+                        return Err(Error::Stopped);
+                    }
+                    self.tile(window, &estimator, (&kernel, way), &bringer, undone)
+                })
+                .collect();
+            found.into_iter().collect()
+        };
+        // Where displacement changes within a tile, its texture decides which part of the tile is heard; and folded detail
+        // is the same only where the same places were looked at. So the field is undone and what is left is measured again.
+        out.tiles = look(Reduce::Auto, None)?;
+        let mut best = likeness(&out.tiles);
+        let mut way = Reduce::Auto;
+        let mut field = fit(&votes(&out.tiles), extent);
+        if self.grows() {
+            // An unprotected reduction is best compared with one that folded the same: tried where such ones look.
+            for start in self.starts(extent) {
+                let found = look(Reduce::None, start.as_ref())?;
+                if likeness(&found) > best {
+                    best = likeness(&found);
+                    way = Reduce::None;
+                    field = fit(&votes(&found), extent);
+                    out.tiles = found;
                 }
-                self.tile(&window, &estimator, &kernel)
-            })
-            .collect();
-        out.tiles = found.into_iter().collect::<Result<_>>()?;
-        let votes: Vec<Vote> = out
-            .tiles
-            .iter()
-            .filter_map(|t| {
-                let (d, s) = (t.displacement?, t.sigma?);
-                Some(Vote { at: (t.at[0], t.at[1]), by: (d[0], d[1]), variance: (s[0] * s[0], s[1] * s[1]) })
-            })
-            .collect();
+            }
+        }
+        for _ in 0..6 {
+            let Some(last) = field.filter(|f| f.is_uneven() || (self.grows() && f.is_displaced())) else {
+                break;
+            };
+            let found = look(way, Some(&last))?;
+            let Some(next) = fit(&votes(&found), extent) else { break };
+            out.tiles = found;
+            field = Some(next);
+            if next.differs_by(&last) < 2e-3 {
+                break;
+            }
+        }
+        let votes = votes(&out.tiles);
         let count = |why| out.tiles.iter().filter(|t| t.no_vote == Some(why)).count();
         (out.voted, out.with_gaps) = (votes.len(), count(NoVote::Gap));
         (out.flat, out.unlike) = (count(NoVote::Flat), count(NoVote::Unlike));
-        out.field = fit(&votes, extent);
+        out.field = field.filter(|_| !votes.is_empty());
         out.verdict =
             out.field.map(|f| judge(&f, &self.bringer.back, self.bringer.before.size(), self.after.size()));
         out.largest = out.field.map(|f| largest(&f, out.verdict.as_ref(), &votes));
         Ok(out)
     }
 
-    fn tile(&self, window: &Window, estimator: &Estimator, kernel: &Kernel) -> Result<Tile> {
+    /// Where an unprotected reduction may have looked: where it should; at the first centres; with corner centres aligned.
+    fn starts(&self, extent: Extent) -> Vec<Option<Field>> {
+        let mut out = vec![None];
+        let (before, after) = (self.bringer.before.size(), self.after.size());
+        let back = &self.bringer.back;
+        if let Some(axes) = back.as_axes().filter(|a| !a.swapped) {
+            let slip = [0.5 * (axes.rows.0.abs() - 1.0), 0.5 * (axes.columns.0.abs() - 1.0)];
+            out.push(Some(Field::assumed(slip, [0.0; 2], extent)));
+        }
+        if let Some(first) = predict_corner_centres(back, before, after) {
+            let at = back.apply(0.0, 0.0);
+            let growth = |k: usize, at: f64| first[k] * extent.half[k] / (at - extent.middle[k]);
+            out.push(Some(Field::assumed([0.0; 2], [growth(0, at.0), growth(1, at.1)], extent)));
+        }
+        out
+    }
+
+    /// One tile; `bringer` undoes `undone`, which is added again to what is left.
+    fn tile(
+        &self,
+        window: &Window,
+        estimator: &Estimator,
+        way: (&Kernel, Reduce),
+        bringer: &Bringer,
+        undone: Option<&Field>,
+    ) -> Result<Tile> {
         let middle = |r: &Range<usize>| 0.5 * (r.start as f64 + r.end as f64 - 1.0);
         let (row, column) = (middle(&window.rows), middle(&window.columns));
         let at = self.bringer.back.apply(row, column);
-        let measured = match self.bringer.patches(window, &[(kernel, Reduce::Auto)])?.as_deref() {
+        let known = undone.map_or((0.0, 0.0), |f| f.undone_at(at.0, at.1));
+        let known = [known.0, known.1];
+        let measured = match bringer.patches(window, &[way])?.as_deref() {
             Some([before]) => estimator.measure(&self.after(window)?, before),
             _ => Err(NoVote::Gap),
         };
@@ -180,7 +245,7 @@ impl<'a> Tiling<'a> {
             at: [at.0, at.1],
             after_rows: [window.rows.start, window.rows.end],
             after_columns: [window.columns.start, window.columns.end],
-            displacement: shift.map(|s| [0, 1].map(|k| j[k][0] * s.by.0 + j[k][1] * s.by.1)),
+            displacement: shift.map(|s| [0, 1].map(|k| known[k] + j[k][0] * s.by.0 + j[k][1] * s.by.1)),
             sigma: shift.map(|s| {
                 let c = &s.covariance;
                 [0, 1].map(|k| {
@@ -200,18 +265,39 @@ impl<'a> Tiling<'a> {
         field: Option<&Field>,
         progress: &dyn Progress,
     ) -> Result<Option<(Curve, Option<Aliasing>, usize)>> {
+        // Between gaps there may be room for smaller patches alone.
+        for length in [128.0, 64.0, 32.0] {
+            let found = self.spectra_of(length, field, progress)?;
+            if found.is_some() {
+                return Ok(found);
+            }
+        }
+        Ok(None)
+    }
+
+    /// The same with patches of some coarser pixels.
+    fn spectra_of(
+        &self,
+        length: f64,
+        field: Option<&Field>,
+        progress: &dyn Progress,
+    ) -> Result<Option<(Curve, Option<Aliasing>, usize)>> {
         let (rows, columns) = self.common()?;
-        let (Some(r), Some(c)) = (large_cut(&rows, self.unit.0), large_cut(&columns, self.unit.1)) else {
+        let cut = |range: &Range<usize>, unit: f64| large_cut(range, unit, length);
+        let (Some(r), Some(c)) = (cut(&rows, self.unit.0), cut(&columns, self.unit.1)) else {
             return Ok(None);
         };
         self.bringer.check((r.length, c.length))?;
         let mut spectra = Spectra::new((r.length, c.length), &self.local)?;
         let kernel = Kernel::parse("bspline:9")?;
-        let stretch = self.bringer.stretch;
-        let grows = stretch.0.max(stretch.1) > 1.05;
+        let grows = self.grows();
         let ways = [(&kernel, Reduce::Auto), (&kernel, Reduce::None)];
         let ways = &ways[..if grows { 2 } else { 1 }];
         let inverse = self.local.invert()?;
+        // A displacement that changes within a patch, or that decides what is folded, is undone on the way; otherwise by phase.
+        let undone = field.filter(|f| f.is_uneven() || (grows && f.is_displaced()));
+        let bringer = self.bringer.corrected(undone);
+        let even = field.filter(|_| undone.is_none());
         // Some patches at a time in parallel, added in order: the same sums for any number of threads.
         for group in windows(&r, &c).chunks(8) {
             let looked: Vec<Result<_>> = group
@@ -220,8 +306,8 @@ impl<'a> Tiling<'a> {
                     if progress.stopped() {
                         return Err(Error::Stopped);
                     }
-                    let Some(before) = self.bringer.patches(window, ways)? else { return Ok(None) };
-                    let (whole, rest) = self.slip(window, field, &inverse);
+                    let Some(before) = bringer.patches(window, ways)? else { return Ok(None) };
+                    let (whole, rest) = self.slip(window, even, &inverse);
                     let after = self.after(&whole)?;
                     if after.iter().any(|v| !v.is_finite()) {
                         return Ok(None);
@@ -241,8 +327,8 @@ impl<'a> Tiling<'a> {
         if spectra.patches() == 0 {
             return Ok(None);
         }
-        let known = self.known(&kernel);
-        let curve = spectra.curve(&known, 0.5 / stretch.0.max(stretch.1));
+        let known = bringer.known(&kernel);
+        let curve = spectra.curve(&known, 0.5 / self.coarsest());
         let aliasing = spectra.aliasing(&known, &curve, grows);
         Ok(Some((curve, aliasing, spectra.patches())))
     }
@@ -266,18 +352,20 @@ impl<'a> Tiling<'a> {
             _ => (window.clone(), s),
         }
     }
+}
 
-    /// What is known of the spline that brings BEFORE onto AFTER's grid.
-    fn known(&self, kernel: &Kernel) -> Known {
-        let phase = |(step, offset): (f64, f64)| (step.abs() == 1.0).then(|| offset - offset.floor());
-        let axes = self.bringer.back.as_axes().filter(|a| !a.swapped);
-        Known {
-            symbol: kernel.symbol(),
-            degree: 9,
-            stretch: self.bringer.stretch,
-            phase: axes.map_or((None, None), |a| (phase(a.rows), phase(a.columns))),
-        }
-    }
+/// How alike both rasters are over all tiles.
+fn likeness(tiles: &[Tile]) -> f64 {
+    tiles.iter().filter_map(|t| t.correlation).sum()
+}
+
+/// The votes among tiles.
+fn votes(tiles: &[Tile]) -> Vec<Vote> {
+    let vote = |t: &Tile| {
+        let (d, s) = (t.displacement?, t.sigma?);
+        Some(Vote { at: (t.at[0], t.at[1]), by: (d[0], d[1]), variance: (s[0] * s[0], s[1] * s[1]) })
+    };
+    tiles.iter().filter_map(vote).collect()
 }
 
 /// Small tiles: 48 coarser pixels and the rim, half overlapping; in small rasters as many as fit three times.
@@ -294,14 +382,15 @@ fn small_cut(range: &Range<usize>, unit: f64, sigma: f64) -> Option<Cut> {
     Some(Cut::new(range, inner + 2 * margin, inner / 2, most))
 }
 
-/// Large patches for spectra: 128 coarser pixels, half overlapping; less in small rasters.
-fn large_cut(range: &Range<usize>, unit: f64) -> Option<Cut> {
+/// Patches for spectra: so many coarser pixels, half overlapping; less in small rasters.
+fn large_cut(range: &Range<usize>, unit: f64, wanted: f64) -> Option<Cut> {
     let n = range.len();
     let units = |k: f64| (k * unit).ceil() as usize;
     if n < units(24.0) {
         return None;
     }
-    let length = if n >= units(192.0) { units(128.0) } else { (2 * n / 3).max(units(64.0)) }.min(n);
+    let length =
+        if n >= units(1.5 * wanted) { units(wanted) } else { (2 * n / 3).max(units(0.5 * wanted)) }.min(n);
     let most = ((3000.0 / length as f64) as usize).clamp(2, 8);
     Some(Cut::new(range, length, length / 2, most))
 }

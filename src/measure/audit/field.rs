@@ -1,6 +1,7 @@
 //! A displacement that changes linearly over the frame, drawn robustly through the votes of tiles.
 
 use super::solve::{invert, median};
+use crate::map::Map;
 use serde::Serialize;
 
 /// The displacement that one tile found, in input pixels.
@@ -172,10 +173,64 @@ impl Field {
         )
     }
 
+    /// The map that takes a place to the one whose content is displaced onto it (to first order in the gradient). Terms
+    /// within their error are left out, so that rows and columns stay apart where they can.
+    pub fn undone(&self) -> Map {
+        let h = self.extent.half.map(|h| h.max(0.5));
+        let bound = self.gradient_bound();
+        let row = |k: usize| {
+            let term =
+                |i: usize| if self.gradient[k][i].abs() > bound { self.gradient[k][i] / h[i] } else { 0.0 };
+            let (r, c) = (term(0), term(1));
+            let m = self.extent.middle;
+            (r, c, self.at_centre[k] - r * m[0] - c * m[1])
+        };
+        let ((a, b, t), (d, e, u)) = (row(0), row(1));
+        Map::affine([[1.0 - a, -b, -t], [-d, 1.0 - e, -u]])
+    }
+
+    /// What [`Field::undone`] undoes at a place (row, column).
+    pub fn undone_at(&self, row: f64, column: f64) -> (f64, f64) {
+        let (r, c) = self.undone().apply(row, column);
+        (row - r, column - c)
+    }
+
+    /// A constant displacement, or one that grows along both axes from the middle to the edges; taken for exact.
+    pub fn assumed(at_centre: [f64; 2], growth: [f64; 2], extent: Extent) -> Self {
+        Field {
+            at_centre,
+            gradient: [[growth[0], 0.0], [0.0, growth[1]]],
+            sigma: 0.0,
+            gradient_sigma: 0.0,
+            scatter: 0.0,
+            has_gradient: true,
+            extent,
+        }
+    }
+
+    /// The largest difference to another field at the frame's corners and in its middle.
+    pub fn differs_by(&self, other: &Field) -> f64 {
+        let (m, h) = (self.extent.middle, self.extent.half);
+        [(0.0, 0.0), (-1.0, -1.0), (-1.0, 1.0), (1.0, -1.0), (1.0, 1.0)].iter().fold(0.0, |most, (r, c)| {
+            let at = (m[0] + r * h[0], m[1] + c * h[1]);
+            let (a, b) = (self.at(at.0, at.1), other.at(at.0, at.1));
+            most.max((a.0 - b.0).hypot(a.1 - b.1))
+        })
+    }
+
+    fn gradient_bound(&self) -> f64 {
+        (4.0 * self.gradient_sigma).max(0.02)
+    }
+
     /// Whether the displacement changes over the frame by more than its error and a fiftieth of a pixel.
     pub fn is_uneven(&self) -> bool {
-        let bound = (4.0 * self.gradient_sigma).max(0.02);
+        let bound = self.gradient_bound();
         self.gradient.iter().flatten().any(|g| g.abs() > bound)
+    }
+
+    /// Whether there is any displacement to speak of.
+    pub fn is_displaced(&self) -> bool {
+        self.is_uneven() || self.at_centre[0].hypot(self.at_centre[1]) > (4.0 * self.sigma).max(0.02)
     }
 
     /// The largest displacement in the frame (its length): in the middle, or at a corner if it changes.

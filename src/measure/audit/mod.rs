@@ -16,4 +16,4 @@ pub use curve::{Curve, Ring, Sharpness};
 pub use field::{Extent, Field, Vote, fit};
 pub use shift::{Estimator, NoVote, Shift};
 pub use spectrum::{Aliasing, Known, Spectra};
-pub use verdict::{Kind, Verdict, judge};
+pub use verdict::{Kind, Verdict, judge, predict_corner_centres};

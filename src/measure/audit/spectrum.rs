@@ -256,12 +256,16 @@ impl Spectra {
         for ((r, c), power) in self.power[0].indexed_iter() {
             let f = self.input_frequency(r, c);
             let length = f.0.hypot(f.1);
-            if length < lowest {
+            // Beyond the coarser grid's Nyquist frequency there are only images of what lies below.
+            if length < lowest || length > curve.nyquist {
                 continue;
             }
             let Some(ring) = curve.nearest(length) else { continue };
             let t = known.transfer(f);
-            let (k, k0) = (ring.transfer / t, ring.unprotected / t);
+            // Along rows and columns the transfer may differ: by the cosine of twice the angle, to first order.
+            let turn = (f.0 * f.0 - f.1 * f.1) / (length * length);
+            let lean = ring.rows.zip(ring.columns).map_or(0.0, |(r, c)| 0.5 * (r - c) * turn);
+            let (k, k0) = ((ring.transfer + lean) / t, ring.unprotected / t);
             let (ab, au, bu) = (self.cross[0][(r, c)], self.cross[1][(r, c)], self.cross[2][(r, c)]);
             let bb = self.power[1][(r, c)];
             after += power;

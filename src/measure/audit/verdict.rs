@@ -63,7 +63,8 @@ pub fn judge(field: &Field, back: &Map, before: (usize, usize), after: (usize, u
         return uneven(field, back, after, corner_centres, verdict);
     }
     if c[0].hypot(c[1]) <= bound {
-        return verdict(Kind::None, "no displacement".into(), None);
+        let words = if bound > 0.1 { "too uncertain to be told from none" } else { "no displacement" };
+        return verdict(Kind::None, words.into(), None);
     }
     let step = steps(back);
     let names: Vec<Slip> = [0, 1].iter().map(|&k| slip(c[k], step[k], bound.max(LIKE))).collect();
@@ -152,8 +153,7 @@ fn uneven(
     // In pixels per pixel; a small turn has opposite shears.
     let (shear_r, shear_c) = (g[0][1] / h[1].max(0.5), g[1][0] / h[0].max(0.5));
     let is_turn = (shear_r + shear_c).abs() < 0.2 * (shear_r - shear_c).abs()
-        && g[0][0].abs() <= bound
-        && g[1][1].abs() <= bound;
+        && [(0, 1), (1, 0)].iter().all(|&(k, other)| g[k][k].abs() <= bound.max(0.1 * g[k][other].abs()));
     if is_turn {
         // Right (0, 1) goes up for a counter-clockwise turn.
         let degrees = (0.5 * (shear_c - shear_r)).to_degrees();
@@ -185,7 +185,7 @@ fn steps(back: &Map) -> [f64; 2] {
 }
 
 /// Displacement at AFTER's first pixel if the centres of the corner pixels of both rasters had been laid on each other.
-fn predict_corner_centres(back: &Map, before: (usize, usize), after: (usize, usize)) -> Option<[f64; 2]> {
+pub fn predict_corner_centres(back: &Map, before: (usize, usize), after: (usize, usize)) -> Option<[f64; 2]> {
     let axes = back.as_axes().filter(|a| !a.swapped && a.rows.0 > 0.0 && a.columns.0 > 0.0)?;
     if after.0 < 2 || after.1 < 2 || before.0 < 2 || before.1 < 2 {
         return None;
