@@ -282,11 +282,12 @@ impl Bringer<'_> {
         let edges = |r: &Range<usize>| (r.start as f64 - 0.5, r.end as f64 - 0.5);
         let b = self.back.bounds(edges(&window.rows), edges(&window.columns));
         let (n, m) = self.before.size();
-        const SLACK: f64 = 0.75;
-        if !(b.rows.0 > -0.5 - SLACK
-            && b.rows.1 < n as f64 - 0.5 + SLACK
-            && b.columns.0 > -0.5 - SLACK
-            && b.columns.1 < m as f64 - 0.5 + SLACK)
+        // A little beyond the edge there is the extension; only a tile's rim looks there.
+        let beyond = (2.0 * self.stretch.0, 2.0 * self.stretch.1);
+        if !(b.rows.0 > -0.5 - beyond.0
+            && b.rows.1 < n as f64 - 0.5 + beyond.0
+            && b.columns.0 > -0.5 - beyond.1
+            && b.columns.1 < m as f64 - 0.5 + beyond.1)
         {
             return Ok(None);
         }

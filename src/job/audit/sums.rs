@@ -142,6 +142,10 @@ impl Pass<'_> {
                     // A total is compared as the density that it stands for.
                     let density = if self.values == AuditValues::Total { a / area } else { a };
                     count_found(&mut sums.gaps, share, own, least, density, code, range);
+                    // Without any sample BEFORE has no range.
+                    if !(range.low <= range.high) {
+                        continue;
+                    }
                     if density > range.high + slack {
                         sums.clipping.above_range += 1;
                         sums.clipping.most_above = sums.clipping.most_above.max(density - range.high);

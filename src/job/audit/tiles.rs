@@ -166,26 +166,32 @@ impl<'a> Tiling<'a> {
         // is the same only where the same places were looked at. So the field is undone and what is left is measured again.
         out.tiles = look(Reduce::Auto, None)?;
         let mut best = likeness(&out.tiles);
-        let mut way = Reduce::Auto;
-        let mut field = fit(&votes(&out.tiles), extent);
+        let (mut way, mut undone) = (Reduce::Auto, None);
         if self.grows() {
             // An unprotected reduction is best compared with one that folded the same: tried where such ones look.
             for start in self.starts(extent) {
                 let found = look(Reduce::None, start.as_ref())?;
                 if likeness(&found) > best {
                     best = likeness(&found);
-                    way = Reduce::None;
-                    field = fit(&votes(&found), extent);
+                    (way, undone) = (Reduce::None, start);
                     out.tiles = found;
                 }
             }
         }
+        let mut field = fit(&votes(&out.tiles), extent);
         for _ in 0..6 {
             let Some(last) = field.filter(|f| f.is_uneven() || (self.grows() && f.is_displaced())) else {
                 break;
             };
             let found = look(way, Some(&last))?;
             let Some(next) = fit(&votes(&found), extent) else { break };
+            if way == Reduce::None && likeness(&found) < best {
+                // Folded detail that kernels treat unlike leads astray: where both are most alike is the better answer.
+                field = undone.map(|u: Field| u.told_by(&last)).or(field);
+                break;
+            }
+            best = likeness(&found);
+            undone = Some(last);
             out.tiles = found;
             field = Some(next);
             if next.differs_by(&last) < 2e-3 {

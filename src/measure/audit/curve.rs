@@ -57,7 +57,8 @@ pub struct Sharpness {
     pub gaussian_misfit: f64,
     /// Whether the blur is well described by it: a sigma above 0.3 pixels and a misfit under 0.03.
     pub is_gaussian: bool,
-    /// Difference of the transfer along rows and along columns, root mean square over the frequencies that could be judged.
+    /// Difference of the transfer along rows and along columns, root mean square over the frequencies that could be judged,
+    /// without what chance makes.
     pub axes_differ_by: f64,
 }
 
@@ -110,9 +111,13 @@ impl Curve {
         }
         // Beyond what could be judged a Gaussian goes on as one.
         let beyond = (is_gaussian && crossing.is_none()).then(|| (2f64.ln() / 2.0).sqrt() / (PI * sigma));
-        let differences: Vec<f64> =
-            self.judged().filter_map(|r| Some(((r.rows? - r.columns?) / gain).powi(2))).collect();
-        let axes_differ_by = (differences.iter().sum::<f64>() / differences.len().max(1) as f64).sqrt();
+        // Along each axis a sixth of the ring tells: twice six times its variance is what chance makes.
+        let differences: Vec<f64> = self
+            .judged()
+            .filter_map(|r| Some(((r.rows? - r.columns?).powi(2) - 12.0 * r.error * r.error) / (gain * gain)))
+            .collect();
+        let axes_differ_by =
+            (differences.iter().sum::<f64>() / differences.len().max(1) as f64).max(0.0).sqrt();
         Some(Sharpness {
             gain,
             transfer: [0.10, 0.25, 0.40].map(|f| self.at(f, gain).map(|t| t.max(0.0))),

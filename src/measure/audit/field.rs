@@ -208,6 +208,17 @@ impl Field {
         }
     }
 
+    /// The same field with the errors of a fit to the tiles, and half of what it is off that fit added.
+    pub fn told_by(&self, fitted: &Field) -> Field {
+        let [r, c] = [0, 1].map(|k| self.at_centre[k] - fitted.at_centre[k]);
+        Field {
+            sigma: fitted.sigma.hypot(0.5 * r.hypot(c)),
+            gradient_sigma: fitted.gradient_sigma.hypot(0.5 * self.differs_by(fitted)),
+            scatter: fitted.scatter,
+            ..*self
+        }
+    }
+
     /// The largest difference to another field at the frame's corners and in its middle.
     pub fn differs_by(&self, other: &Field) -> f64 {
         let (m, h) = (self.extent.middle, self.extent.half);

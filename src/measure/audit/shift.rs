@@ -342,7 +342,7 @@ fn start(target: &[f64], values: &[f64], weights: &[f64]) -> Option<[f64; 4]> {
         own += w * (v - mv) * (v - mv);
     }
     let gain = if cross > 0.0 { cross / own } else { 1.0 };
-    (own > 0.0).then(|| [gain, mt - gain * mv, 0.0, 0.0])
+    (own > 0.0).then_some([gain, mt - gain * mv, 0.0, 0.0])
 }
 
 /// Whether a shift along either axis changes the patch in a way that no gain and no offset does: the weaker direction must
