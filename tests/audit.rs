@@ -260,6 +260,11 @@ fn gaps_that_appear_leak_or_are_mixed_with_their_code_are_counted() {
     assert_eq!(found.gaps.mixed_with_code, 21, "{:?}", found.gaps);
     assert_eq!(found.gaps.kept, 100);
     assert!(words(&found).contains("averaged into them"), "{}", words(&found));
+    // Nothing left to compare is no closure.
+    let nothing = raster(SIZE, vec![f64::NAN; SIZE.0 * SIZE.1]);
+    let asked = AuditRules { tolerance: Some(1.0), ..AuditRules::default() };
+    let found = judge(&whole, &nothing, &asked);
+    assert!(found.failed_a_check() && found.pixels.valid == 0, "{}", words(&found));
     // A copy that kept its gap has nothing to be told of.
     let found = judge(&with_gap, &with_gap, &AuditRules::default());
     let g = &found.gaps;

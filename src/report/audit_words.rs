@@ -39,7 +39,8 @@ impl Audit {
     fn signal(&self) -> Vec<String> {
         let Some(c) = self.flux.closure else {
             return vec![
-                "signal: nothing to compare: no common region with samples, or all of them are 0".into(),
+                "signal: nothing to compare: no common region with samples, or all of them are 0 or infinite"
+                    .into(),
             ];
         };
         let mut line = format!("signal over the common region: {c:+.2e} of its sum");

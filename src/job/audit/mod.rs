@@ -165,7 +165,7 @@ pub fn audit(
     };
     let j = back.jacobian((a.size().0 as f64 - 1.0) / 2.0, (a.size().1 as f64 - 1.0) / 2.0);
     let stretch = (norm(j[0]), norm(j[1]));
-    let bringer = Bringer { before: &b, band: b.bands.start, back, memory: rules.memory / 2, stretch };
+    let bringer = Bringer { before: &b, band: b.bands.start, back, memory: rules.memory, stretch };
     let tiling = Tiling::new(&a, a.bands.start, bringer, rules.values == AuditValues::Total);
     let displacement_field = tiling.displacement(progress)?;
     let spectra = tiling.spectra(displacement_field.field.as_ref(), progress)?;
@@ -188,8 +188,8 @@ pub fn audit(
     let [sum_before, _, sum_after] = sums.map.totals();
     let [centroid_before, centroid_after] = sums.centroids();
     let all = pixels(&a) * a.bands.len() as u64;
-    let clipping = sums.clipping;
-    let checks = checks(rules, closure, &displacement_field, sharp.map(|s| s.mtf50));
+    let clipping = sums.clipping.clone();
+    let checks = checks(rules, closure, |t| sums.closes(t), &displacement_field, sharp.map(|s| s.mtf50));
     let middle = displacement_field.field.map(|f| (f.at_centre, f.sigma));
     let seconds = started.elapsed().as_secs_f64();
     Ok(Audit {
@@ -219,7 +219,7 @@ pub fn audit(
             rounding: None,
             closure,
             tolerance: rules.tolerance,
-            closed: rules.tolerance.map(|t| closure.is_none_or(|c| c.abs() <= t)),
+            closed: rules.tolerance.map(|t| sums.closes(t)),
         },
         centroid: Centroid { before: centroid_before, after: centroid_after },
         closure_map: sums.map,
@@ -317,13 +317,13 @@ fn sides<'a>(
 fn checks(
     rules: &AuditRules,
     closure: Option<f64>,
+    closes: impl Fn(f64) -> bool,
     displacement: &DisplacementField,
     mtf50: Option<f64>,
 ) -> Vec<Check> {
     let mut out = Vec::new();
     if let Some(bound) = rules.tolerance {
-        // A closure that cannot be had (no signal) has nothing to be off.
-        let held = Some(closure.is_none_or(|c| c.abs() <= bound));
+        let held = Some(closes(bound));
         out.push(Check { name: "closure".into(), value: closure, bound, asked: true, held });
     }
     let asked = rules.max_displacement.is_some();

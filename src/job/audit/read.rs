@@ -178,6 +178,7 @@ pub fn overlap(view: &View, window: &Window, back: &Map, memory: u64) -> Result<
         outside: Outside::Extend,
         // A pixel that finds any sample shows the mean of what it finds.
         min_coverage: 1e-6,
+
         memory,
         ..Rules::default()
     };
@@ -272,7 +273,7 @@ impl Bringer<'_> {
             what: "comparing tiles of rasters whose pixels differ so much in size".into(),
             needed: format!("{} MiB", mib(need)),
             limit: format!("--memory {} MiB", mib(self.memory as f64)),
-            mend: format!("give --memory {}MiB or more, or fewer --threads", mib(1.1 * need)),
+            mend: format!("give --memory {}MiB or more", mib(1.1 * need)),
         })
     }
 

@@ -19,6 +19,8 @@ pub struct Sums {
     moments: [[Sum; 2]; 2],
     /// Samples of AFTER with a number.
     pub valid: u64,
+    /// Those of them over a pixel that BEFORE fills with samples: what is compared.
+    pub common: u64,
 }
 
 /// What does not change from window to window.
@@ -53,16 +55,17 @@ impl Pass<'_> {
             clipping: Clipping::default(),
             moments: Default::default(),
             valid: 0,
+            common: 0,
         };
         sums.gaps.missing_before = self.extremes.0.iter().map(|e| e.missing).sum();
         sums.gaps.missing_after = self.extremes.1.iter().map(|e| e.missing).sum();
-        // Windows are held as f64 here, twice with coverage.
+        // Windows are held as f64 here, up to four times; most of the memory is the engine's.
         let wide = Header {
             sample_type: SampleType::F64,
             bands: self.after.bands.len(),
             ..self.after.source.header().clone()
         };
-        for window in reading_windows(&wide, self.memory / 2) {
+        for window in reading_windows(&wide, self.memory / 4) {
             if progress.stopped() {
                 return Err(Error::Stopped);
             }
@@ -87,7 +90,7 @@ impl Pass<'_> {
     }
 
     fn under(&self, window: &Window) -> Result<Under> {
-        let means = overlap(&View::new(self.before, false), window, &self.back, self.memory / 2)?;
+        let means = overlap(&View::new(self.before, false), window, &self.back, self.memory)?;
         let gapless = self.extremes.0.iter().all(|e| e.missing == 0);
         let coverage = if gapless {
             None
@@ -99,7 +102,7 @@ impl Pass<'_> {
                 columns: window.columns.start.saturating_sub(across)
                     ..(window.columns.end + across).min(size.1),
             };
-            let wide = overlap(&View::new(self.before, true), &halo, &self.back, self.memory / 2)?;
+            let wide = overlap(&View::new(self.before, true), &halo, &self.back, self.memory)?;
             let (mut own, mut least) = (Vec::new(), Vec::new());
             for band in wide.chunks(halo.area()) {
                 let (o, l) = crop_and_least(band, &halo, window, (down, across));
@@ -156,6 +159,7 @@ impl Pass<'_> {
                     if b.is_nan() || !(own > WHOLE) || !(share > 0.0) {
                         continue;
                     }
+                    sums.common += 1;
                     let before = b * area * share;
                     let after = if self.values == AuditValues::Total { a } else { a * area * share };
                     before_sum += before;
@@ -265,6 +269,16 @@ fn crop_and_least(
 }
 
 impl Sums {
+    /// Whether the signal closes within a bound. Where both sides are 0 there is nothing to be off; where nothing is there to
+    /// be compared, or sums are not finite, it does not close.
+    pub fn closes(&self, bound: f64) -> bool {
+        let [before, modulus, after] = self.map.totals();
+        match self.map.total_closure() {
+            Some(c) => c.abs() <= bound,
+            None => self.common > 0 && modulus == 0.0 && before == 0.0 && after == 0.0,
+        }
+    }
+
     /// Centre of the signal (row, column), input pixels, before and after; `None` where the signal cancels.
     pub fn centroids(&self) -> [Option<[f64; 2]>; 2] {
         let [before, modulus, after] = self.map.totals();
