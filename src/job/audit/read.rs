@@ -178,7 +178,6 @@ pub fn overlap(view: &View, window: &Window, back: &Map, memory: u64) -> Result<
         outside: Outside::Extend,
         // A pixel that finds any sample shows the mean of what it finds.
         min_coverage: 1e-6,
-
         memory,
         ..Rules::default()
     };
