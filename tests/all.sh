@@ -1,10 +1,10 @@
 #!/bin/sh
-# Runs every test: Rust's own, and those against SciPy, tifffile, scikit-image and matplotlib, which are installed into
+# Runs every test: Rust's own, and those against SciPy, tifffile, OpenCV, scikit-image and matplotlib, which are installed into
 # target/peers first. Needs Rust, a C compiler and Python 3.
 set -eu
 cd "$(dirname "$0")/.."
 peers=target/peers
-if [ ! -x "$peers/bin/python" ] || ! "$peers/bin/python" -c 'import scipy, tifffile, imagecodecs, skimage, matplotlib' 2>/dev/null; then
+if [ ! -x "$peers/bin/python" ] || ! "$peers/bin/python" -c 'import scipy, tifffile, imagecodecs, skimage, matplotlib, cv2' 2>/dev/null; then
     mkdir -p target
     rm -rf "$peers"
     python3 -m venv "$peers" || {

@@ -34,6 +34,11 @@ fn real_pictures_and_elevations_agree_with_scipy() {
 }
 
 #[test]
+fn audits_judge_what_scipy_and_opencv_made() {
+    run("audit_peer");
+}
+
+#[test]
 fn tiffs_go_to_and_from_tifffile_bit_for_bit() {
     run("tiff_peer");
 }

@@ -165,7 +165,7 @@ fn sample_type(text: &str) -> Result<SampleType, String> {
 }
 
 /// A size in bytes, with a decimal or binary unit.
-fn memory(text: &str) -> Result<u64, String> {
+pub(super) fn memory(text: &str) -> Result<u64, String> {
     let split = text.find(|c: char| !(c.is_ascii_digit() || c == '.')).unwrap_or(text.len());
     let (number, unit) = text.split_at(split);
     let factor: f64 = match unit.trim().to_ascii_lowercase().as_str() {

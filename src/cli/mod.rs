@@ -1,5 +1,6 @@
 //! The command line: one file a command; parses, calls the library, prints. No numerics.
 
+mod audit;
 mod common;
 mod demo;
 mod describe;
@@ -42,6 +43,8 @@ enum Command {
     Unify(unify::Arguments),
     /// The difference of two rasters on one grid, with its uncertainty
     Subtract(subtract::Arguments),
+    /// Check a resampling done by anyone: signal, displacement, blur, gaps
+    Audit(audit::Arguments),
     /// What is in a file: grid, samples, missing, statistics
     Describe(describe::Arguments),
     /// The kernels, with support, order, regularity and poles
@@ -69,6 +72,7 @@ pub fn main() -> ExitCode {
         Command::Move(a) => r#move::run(&a),
         Command::Unify(a) => unify::run(&a),
         Command::Subtract(a) => subtract::run(&a),
+        Command::Audit(a) => audit::run(&a),
         Command::Describe(a) => describe::run(&a),
         Command::Kernels(a) => kernels::run(&a),
         Command::Replay(a) => replay::run(&a),

@@ -1,6 +1,7 @@
 //! A job: what a command becomes. It is run, written into the ledger, and replayed from there.
 
 mod account;
+mod audit;
 mod compared;
 mod costs;
 mod describe;
@@ -9,6 +10,7 @@ mod planes;
 mod subtract;
 mod windows;
 
+pub use audit::{AuditRules, AuditValues, MAX_DISPLACEMENT, audit, audit_files, relate};
 pub use describe::{BandStatistics, describe};
 pub use estimate::Estimate;
 pub use planes::SigmaFrom;

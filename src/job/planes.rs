@@ -133,7 +133,7 @@ impl Planes {
     }
 
     /// Starts one file of f32.
-    pub fn plane(path: &PathBuf, header: &Header, overwrite: bool) -> Result<Box<dyn Sink>> {
+    pub fn plane(path: &Path, header: &Header, overwrite: bool) -> Result<Box<dyn Sink>> {
         raster::create(path, &plane_header(header, SampleType::F32), overwrite)
     }
 

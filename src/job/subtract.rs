@@ -6,7 +6,7 @@ use super::planes::Planes;
 use super::{Conduct, Job, Progress, Ready};
 use crate::error::{Error, Result};
 use crate::measure::Sum;
-use crate::raster::{self, Digest, Header, SampleType, Samples, Sink, Window, check_free};
+use crate::raster::{self, Digest, Header, Sample, SampleType, Samples, Sink, Window, check_free};
 use crate::report::{Ledger, write_whole};
 use crate::resample::Values;
 use serde::Serialize;
@@ -85,7 +85,7 @@ impl Sink for Handing {
     fn write(&mut self, window: &Window, samples: &Samples) -> Result<()> {
         let values = match samples {
             Samples::F64(v) => v.clone(),
-            other => crate::with_samples!(other, v => v.iter().map(|v| f64::from(*v)).collect()),
+            other => crate::with_samples!(other, v => v.iter().map(|v| v.wide()).collect()),
         };
         // Nobody takes it any more: the other side has failed and tells why.
         self.to.send(Piece { window: window.clone(), values }).map_err(|_| Error::Stopped)

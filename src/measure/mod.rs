@@ -1,5 +1,6 @@
 //! Measures: what a resampling does to signal, detail and noise. The ledger and the assay both ask here.
 
+pub mod audit;
 mod flux;
 mod local;
 mod response;

@@ -1,5 +1,7 @@
 //! Reports: the ledger, and pictures.
 
+mod audit;
+mod audit_words;
 pub mod colour;
 mod display;
 mod foot;
@@ -13,6 +15,10 @@ mod summary;
 pub mod text;
 mod ticks;
 
+pub use audit::{
+    Audit, AuditPixels, Check, Clipping, DisplacementField, Gaps, MeasuredBlur, MeasuredDisplacement,
+    MeasuredTransfer, Relation, Spectrum, Tile,
+};
 pub use ledger::{
     Blur, Centroid, Displacement, Flux, KernelEntry, Ledger, LocalClosure, Noise, Pixels, RasterEntry,
     Ringing, SumUnderestimated, Time, Transfer, peak_memory_bytes, write_whole,
