@@ -4,7 +4,7 @@
 set -eu
 cd "$(dirname "$0")/.."
 peers=target/peers
-if [ ! -x "$peers/bin/python" ] || ! "$peers/bin/python" -c 'import scipy, tifffile, imagecodecs, skimage, matplotlib, cv2' 2>/dev/null; then
+if [ ! -x "$peers/bin/python" ] || ! "$peers/bin/python" -c 'import scipy, tifffile, imagecodecs, skimage, matplotlib, cv2, astropy' 2>/dev/null; then
     mkdir -p target
     rm -rf "$peers"
     python3 -m venv "$peers" || {

@@ -47,3 +47,8 @@ fn tiffs_go_to_and_from_tifffile_bit_for_bit() {
 fn totals_are_differences_of_scipys_cumulative_spline() {
     run("totals_peer");
 }
+
+#[test]
+fn fits_files_go_to_and_from_astropy() {
+    run("fits_peer");
+}

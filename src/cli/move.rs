@@ -25,7 +25,7 @@ pub struct Arguments {
     /// Raster to move
     #[arg(value_name = "IN")]
     input: PathBuf,
-    /// Where the result goes (.tif, .npy, .png)
+    /// Where the result goes (.tif, .fits, .npy, .png)
     #[arg(value_name = "OUT")]
     output: PathBuf,
     /// Pixels down and right

@@ -28,7 +28,7 @@ pub struct Arguments {
     /// Raster to rescale
     #[arg(value_name = "IN")]
     input: PathBuf,
-    /// Where the result goes (.tif, .npy, .png)
+    /// Where the result goes (.tif, .fits, .npy, .png)
     #[arg(value_name = "OUT")]
     output: PathBuf,
     /// Output pixels per input pixel: F, or FR,FC for rows and columns

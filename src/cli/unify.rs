@@ -258,7 +258,7 @@ fn output_name(path: &Path, quiet: bool) -> Result<PathBuf> {
         .ok_or_else(|| Error::usage(format!("{} is no file", path.display()), "name a raster file"))?;
     let name = PathBuf::from(name);
     let ending = name.extension().map(|e| e.to_string_lossy().to_lowercase()).unwrap_or_default();
-    if matches!(ending.as_str(), "tif" | "tiff" | "btf" | "gtiff" | "npy" | "png") {
+    if matches!(ending.as_str(), "tif" | "tiff" | "btf" | "gtiff" | "npy" | "png" | "fits" | "fit" | "fts") {
         return Ok(name);
     }
     let instead = name.with_extension("tif");

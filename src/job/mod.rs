@@ -164,7 +164,8 @@ impl Job {
         let sample_type = self.rules.sample_type.unwrap_or(default_type);
         let codes: Vec<f64> =
             from.missing.into_iter().chain(self.rules.missing).filter(|c| !c.is_nan()).collect();
-        let fill = codes.iter().copied().find(|c| can_hold(sample_type, *c));
+        let declares = sample_type.integer_range().is_some() || raster::declares_float_codes(&self.output);
+        let fill = codes.iter().copied().find(|c| declares && can_hold(sample_type, *c));
         if let (None, Some(code), Some(_)) = (fill, self.rules.missing, sample_type.integer_range()) {
             return Err(Error::usage(
                 format!("--missing {code} cannot be stored as {}", sample_type.name()),

@@ -4,6 +4,7 @@
 
 mod beside;
 mod digest;
+mod fits;
 mod masked;
 mod memory;
 mod npy;
@@ -239,6 +240,7 @@ pub fn open(path: &Path) -> Result<Box<dyn Source>> {
             }
         },
         [0x93, b'N', b'U', b'M', b'P', b'Y', ..] => Box::new(npy::NpySource::open(path)?),
+        [b'S', b'I', b'M', b'P', b'L', b'E', b' ', b' '] => Box::new(fits::FitsSource::open(path)?),
         [0x89, b'P', b'N', b'G', ..] | [0xff, 0xd8, ..] | [b'P', b'1'..=b'7', ..] => {
             Box::new(picture::open(path)?)
         }
@@ -246,7 +248,7 @@ pub fn open(path: &Path) -> Result<Box<dyn Source>> {
             return Err(Error::unsupported(
                 path,
                 "its first bytes are those of no format that is read",
-                "give a TIFF, BigTIFF, NPY, PNG, JPEG or PNM file",
+                "give a TIFF, BigTIFF, FITS, NPY, PNG, JPEG or PNM file",
             ));
         }
     })
@@ -259,9 +261,10 @@ fn format_of(path: &Path) -> Result<Format> {
         "tif" | "tiff" | "btf" | "gtiff" => Ok(Format::Tiff),
         "npy" => Ok(Format::Npy),
         "png" => Ok(Format::Picture),
+        "fits" | "fit" | "fts" => Ok(Format::Fits),
         _ => Err(Error::usage(
             format!("{}: cannot write files that end in \"{ending}\"", path.display()),
-            "end the name in .tif, .npy or .png",
+            "end the name in .tif, .fits, .npy or .png",
         )),
     }
 }
@@ -273,9 +276,14 @@ fn format_of(path: &Path) -> Result<Format> {
 pub fn check_writable(path: &Path, header: &Header) -> Result<()> {
     match format_of(path)? {
         Format::Picture => picture::check_writable(path, header),
-        Format::Npy | Format::Memory => Ok(()),
+        Format::Npy | Format::Memory | Format::Fits => Ok(()),
         Format::Tiff => tiff::check_writable(path, header),
     }
+}
+
+/// Whether the format of `path` can declare a code for missing in samples of floating point; FITS has NaN alone.
+pub fn declares_float_codes(path: &Path) -> bool {
+    !matches!(format_of(path), Ok(Format::Fits))
 }
 
 /// Creates a raster file; the format is told by the name's ending. Nothing appears under `path` before
@@ -287,6 +295,7 @@ pub fn create(path: &Path, header: &Header, overwrite: bool) -> Result<Box<dyn S
     Ok(match format_of(path)? {
         Format::Picture => Box::new(picture::PngSink::create(path, header, overwrite)?),
         Format::Npy => Box::new(npy::NpySink::create(path, header, overwrite)?),
+        Format::Fits => Box::new(fits::FitsSink::create(path, header, overwrite)?),
         Format::Tiff | Format::Memory => Box::new(tiff::TiffSink::create(path, header, overwrite)?),
     })
 }

@@ -12,6 +12,8 @@ pub enum Format {
     Npy,
     /// A picture file: PNG, JPEG, PNM.
     Picture,
+    /// FITS.
+    Fits,
     /// No file: in memory.
     Memory,
 }
@@ -45,6 +47,8 @@ pub struct Storage {
     pub resolution: Option<(f64, f64, u16)>,
     /// Text tags that travel as they are.
     pub texts: Vec<(u16, String)>,
+    /// FITS cards that travel, 80 characters each; those of the linear world coordinates are corrected on the way.
+    pub cards: Vec<String>,
     /// What the user should be told about what was not understood or not carried.
     pub notes: Vec<String>,
 }

@@ -151,14 +151,18 @@ pub struct Placed {
 }
 
 /// Makes the tags for a grid; `carried` are the keys of the raster it came from, used if they name the same CRS.
-pub fn place(grid: &Grid, carried: Option<&GeoKeys>) -> Placed {
+///
+/// `by_ome`: pixel size and unit stand in OME-XML, and need no keys.
+pub fn place(grid: &Grid, carried: Option<&GeoKeys>, by_ome: bool) -> Placed {
     let mut placed = Placed { scale: None, tie: None, matrix: None, keys: None };
     let keys = match (&grid.crs, carried) {
         (Some(crs), Some(keys)) if keys.crs().as_ref() == Some(crs) => Some(keys.clone()),
         (Some(crs), _) => crs.strip_prefix("EPSG:").and_then(|c| c.parse().ok()).map(GeoKeys::for_epsg),
         // Keys without a CRS, or a point grid, still say what a sample stands for.
         (None, Some(keys)) if grid.world.is_some() && keys.crs().is_none() => Some(keys.clone()),
-        (None, _) if grid.world.is_some() && (grid.sample == Sampling::Point || grid.unit.is_none()) => {
+        (None, _)
+            if grid.world.is_some() && (grid.sample == Sampling::Point || grid.unit.is_none() || !by_ome) =>
+        {
             Some(GeoKeys::default())
         }
         _ => None,

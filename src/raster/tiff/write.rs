@@ -210,7 +210,8 @@ impl TiffSink {
         if s.pages > 1 {
             e.push(Entry::long(tags::NEW_SUBFILE_TYPE, &[2]));
         }
-        let placed = geo::place(&h.grid, s.geo_keys.as_ref());
+        let placed =
+            geo::place(&h.grid, s.geo_keys.as_ref(), s.description.as_deref().is_some_and(ome::is_ome));
         if let Some(v) = placed.scale {
             e.push(Entry::double(tags::PIXEL_SCALE, &v));
         }
