@@ -168,8 +168,15 @@ fn sky(form: &str) -> Vec<(&'static str, String)> {
 
 /// Runs a job from a.fits to b.fits.
 fn run(f: &Folder, target: Grid, back: Map) -> Cards {
-    let job =
-        Job { input: f.path("a.fits"), output: f.path("b.fits"), target, back, rules: Rules::default(), mask: None, sigma: None };
+    let job = Job {
+        input: f.path("a.fits"),
+        output: f.path("b.fits"),
+        target,
+        back,
+        rules: Rules::default(),
+        mask: None,
+        sigma: None,
+    };
     job.run(&Conduct { overwrite: true, ..Conduct::default() }, &()).unwrap();
     Cards::read(&f.path("b.fits"))
 }

@@ -47,7 +47,7 @@ impl Cards {
                         path,
                         format!("card {} of the header at byte {at}", block * 36 + i as u64 + 1),
                         format!(
-                            "it holds other characters than ASCII text (it begins \"{}\")",
+                            "it holds other characters than ASCII text (it begins \"{}\"), or the card END is missing before it",
                             shown.escape_debug()
                         ),
                     ));
