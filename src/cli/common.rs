@@ -3,7 +3,7 @@
 use super::progress::Bar;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
-use crate::job::{Conduct, Job, SigmaFrom};
+use crate::job::{Conduct, Job, SigmaFrom, write_report};
 use crate::kernel::{Extension, Kernel};
 use crate::raster::SampleType;
 use crate::report::Ledger;
@@ -115,6 +115,9 @@ pub struct Running {
     /// Threads [default: all cores]
     #[arg(long, value_name = "N")]
     pub threads: Option<usize>,
+    /// One self-contained page (HTML): before and after, where signal went, what the kernel does
+    #[arg(long, value_name = "FILE.html")]
+    pub report: Option<PathBuf>,
     /// Replace outputs that exist
     #[arg(long)]
     pub overwrite: bool,
@@ -237,6 +240,31 @@ pub fn run_job(job: &Job, running: &Running, conduct: &Conduct) -> Result<Ledger
         say(&[format!("ledger: {}", path.display())]);
     }
     Ok(made)
+}
+
+/// Refuses, before any work, a report's name that is taken or named for something else as well.
+pub fn check_report(running: &Running, others: &[&std::path::Path]) -> Result<()> {
+    let Some(path) = &running.report else { return Ok(()) };
+    if others
+        .iter()
+        .any(|o| *o == path || o.canonicalize().is_ok_and(|o| path.canonicalize().is_ok_and(|p| o == p)))
+    {
+        return Err(Error::usage(
+            format!("{} is named for two things", path.display()),
+            "give the report a name of its own, such as run.html",
+        ));
+    }
+    crate::raster::check_free(path, running.overwrite)
+}
+
+/// Writes the page of some runs, if one is wanted.
+pub fn report(running: &Running, runs: &[(&Job, &Ledger)]) -> Result<()> {
+    let Some(path) = &running.report else { return Ok(()) };
+    write_report(path, runs)?;
+    if !running.quiet {
+        say(&[format!("report: {}", path.display())]);
+    }
+    Ok(())
 }
 
 /// Tells what a job would take.

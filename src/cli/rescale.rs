@@ -2,8 +2,8 @@
 
 use super::Outcome;
 use super::common::{
-    Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say_notes, size,
-    tell_estimate, warn_of_kernel,
+    Planes, Resampling, Running, about, check_report, command_line, conclude, pair, report, rules, run_job,
+    say_notes, size, tell_estimate, warn_of_kernel,
 };
 use crate::error::Result;
 use crate::job::{Conduct, Job};
@@ -80,6 +80,8 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     if a.running.dry_run {
         return tell_estimate(&job, &conduct, &a.running);
     }
+    check_report(&a.running, &[&job.input, &job.output, &job.ledger_path()])?;
     let ledger = run_job(&job, &a.running, &conduct)?;
+    report(&a.running, &[(&job, &ledger)])?;
     conclude(&[ledger], &a.running)
 }

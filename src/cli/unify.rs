@@ -2,8 +2,8 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say,
-    say_notes, tell_estimate, warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, about, check_report, command_line, conclude, pair, report,
+    rules, run_job, say, say_notes, tell_estimate, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::grid::{Grid, Span, span};
@@ -123,8 +123,13 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     for (job, conduct) in &jobs {
         job.check(conduct)?;
     }
+    let taken: Vec<&Path> =
+        jobs.iter().flat_map(|(job, _)| [job.input.as_path(), job.output.as_path()]).collect();
+    check_report(&a.running, &taken)?;
     let ledgers =
         jobs.iter().map(|(job, conduct)| run_job(job, &a.running, conduct)).collect::<Result<Vec<_>>>()?;
+    let runs: Vec<(&Job, &crate::report::Ledger)> = jobs.iter().map(|j| &j.0).zip(&ledgers).collect();
+    report(&a.running, &runs)?;
     conclude(&ledgers, &a.running)
 }
 

@@ -7,6 +7,7 @@ mod costs;
 mod describe;
 mod estimate;
 mod planes;
+mod report;
 mod subtract;
 mod windows;
 
@@ -14,6 +15,7 @@ pub use audit::{AuditRules, AuditValues, MAX_DISPLACEMENT, audit, audit_files, r
 pub use describe::{BandStatistics, describe};
 pub use estimate::Estimate;
 pub use planes::SigmaFrom;
+pub use report::{reduced, write_audit_report, write_report};
 pub use subtract::{Difference, DifferenceLedger, Subtract};
 
 use crate::error::{Error, Result};
