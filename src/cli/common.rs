@@ -77,6 +77,9 @@ pub struct Planes {
     /// Where the share of each pixel's weights that found samples goes
     #[arg(long, value_name = "FILE")]
     pub coverage: Option<PathBuf>,
+    /// Of class codes: where the share of each pixel that each class covers goes, one band a class
+    #[arg(long, value_name = "FILE")]
+    pub fractions: Option<PathBuf>,
     /// Quality flags: samples with any of the bits (or any flag but 0) are missing; FILE or FILE:BITS, such as dq.tif:0x11
     #[arg(long, value_name = "FILE[:BITS]")]
     pub mask: Vec<String>,

@@ -76,6 +76,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         overwrite: a.running.overwrite,
         sigma_out: a.planes.sigma_out.clone(),
         coverage: a.planes.coverage.clone(),
+        fractions: a.planes.fractions.clone(),
     };
     if a.running.dry_run {
         return tell_estimate(&job, &conduct, &a.running);

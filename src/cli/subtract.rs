@@ -61,9 +61,9 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     if rules.values == Values::Label {
         return Err(Error::usage("class codes cannot be subtracted", "unify them and compare the classes"));
     }
-    if a.planes.coverage.is_some() {
+    if a.planes.coverage.is_some() || a.planes.fractions.is_some() {
         return Err(Error::usage(
-            "a difference has no coverage of its own",
+            "a difference has no coverage and no classes of its own",
             "unify both rasters with --coverage first",
         ));
     }
@@ -104,6 +104,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         overwrite: a.running.overwrite,
         sigma_out: a.planes.sigma_out.clone(),
         coverage: None,
+        fractions: None,
     };
     if a.running.dry_run {
         let one = Conduct { sigma_out: None, ..conduct };

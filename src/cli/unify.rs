@@ -14,7 +14,7 @@ use clap::Args;
 use std::collections::HashMap;
 use std::path::{Path, PathBuf};
 
-/// Several rasters onto one grid, each under its own name in a folder. --sigma-out and --coverage name folders as well.
+/// Several rasters onto one grid, each under its own name in a folder. --sigma-out, --coverage and --fractions name folders as well.
 #[derive(Args)]
 #[command(
     group = clap::ArgGroup::new("grid").required(true).args(["onto", "span"]),
@@ -94,6 +94,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
             overwrite: a.running.overwrite,
             sigma_out: beside(a.planes.sigma_out.as_deref(), &output),
             coverage: beside(a.planes.coverage.as_deref(), &output),
+            fractions: beside(a.planes.fractions.as_deref(), &output),
         };
         let job = Job {
             input: path.clone(),
@@ -106,7 +107,8 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         };
         jobs.push((job, conduct));
     }
-    let folders = [Some(&a.out), a.planes.sigma_out.as_ref(), a.planes.coverage.as_ref()];
+    let planes = [&a.planes.sigma_out, &a.planes.coverage, &a.planes.fractions];
+    let folders = std::iter::once(&a.out).chain(planes.into_iter().flatten());
     if a.running.dry_run {
         // Nothing is written, not even a folder: what would be new there is free.
         for (job, conduct) in &mut jobs {
@@ -116,7 +118,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         }
         return Ok(Outcome::Done);
     }
-    for folder in folders.into_iter().flatten() {
+    for folder in folders {
         std::fs::create_dir_all(folder).map_err(|e| Error::io(folder, "making the folder", e))?;
     }
     // All that can be refused is refused before the first raster is touched.
