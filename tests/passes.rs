@@ -290,8 +290,8 @@ fn a_constant_with_gaps_stays_that_constant() {
     let v: Vec<f64> = noise.iter().map(|n| if *n < -0.5 { f64::NAN } else { 7.3 }).collect();
     let source = Memory::new(rows, columns, v, SampleType::F64);
     let turn = |turn, scale| {
-        let about = regauge::map::Motion::about_centre(rows, columns);
-        regauge::map::Motion { turn, scale, ..about }.map().unwrap().invert().unwrap()
+        let about = Motion::about_centre(rows, columns);
+        Motion { turn, scale, ..about }.map().unwrap().invert().unwrap()
     };
     let maps = [
         Map::shift(0.37, -1.25),

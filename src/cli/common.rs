@@ -69,7 +69,7 @@ impl OutsideOption {
 #[command(next_help_heading = "Uncertainty and gaps")]
 pub struct Planes {
     /// Standard uncertainty of the input: a raster file, a number, or poisson:GAIN,READ (electrons a count, electrons)
-    #[arg(long, value_name = "SIGMA")]
+    #[arg(long, value_name = "SIGMA", allow_hyphen_values = true)]
     pub sigma: Vec<String>,
     /// Where the standard uncertainty of the output goes
     #[arg(long, value_name = "FILE")]
@@ -271,8 +271,8 @@ pub fn report(running: &Running, runs: &[(&Job, &Ledger)]) -> Result<()> {
 }
 
 /// Tells what a job would take.
-pub fn tell_estimate(job: &Job, conduct: &Conduct, running: &Running) -> Result<Outcome> {
-    let estimate = job.estimate(conduct)?;
+pub fn tell_estimate(job: &Job, conduct: &Conduct, running: &Running, folder_comes: bool) -> Result<Outcome> {
+    let estimate = job.estimate(conduct, folder_comes)?;
     if running.json {
         print_json(&estimate)?;
     }

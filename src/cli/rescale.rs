@@ -79,7 +79,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         fractions: a.planes.fractions.clone(),
     };
     if a.running.dry_run {
-        return tell_estimate(&job, &conduct, &a.running);
+        return tell_estimate(&job, &conduct, &a.running, false);
     }
     check_report(&a.running, &[&job.input, &job.output, &job.ledger_path()])?;
     let ledger = run_job(&job, &a.running, &conduct)?;

@@ -109,7 +109,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     if a.running.dry_run {
         let one = Conduct { sigma_out: None, ..conduct };
         for job in [&subtract.a, &subtract.b] {
-            say(&job.estimate(&one)?.summary());
+            say(&job.estimate(&one, false)?.summary());
         }
         return Ok(Outcome::Done);
     }

@@ -110,11 +110,9 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     let planes = [&a.planes.sigma_out, &a.planes.coverage, &a.planes.fractions];
     let folders = std::iter::once(&a.out).chain(planes.into_iter().flatten());
     if a.running.dry_run {
-        // Nothing is written, not even a folder: what would be new there is free.
-        for (job, conduct) in &mut jobs {
-            job.output = job.output.file_name().map(PathBuf::from).unwrap_or_default();
-            *conduct = Conduct { command: Vec::new(), overwrite: true, ..Conduct::default() };
-            tell_estimate(job, conduct, &a.running)?;
+        // Nothing is written, not even a folder.
+        for (job, conduct) in &jobs {
+            tell_estimate(job, conduct, &a.running, !a.out.is_dir())?;
         }
         return Ok(Outcome::Done);
     }
