@@ -13,6 +13,16 @@ if [ ! -x "$peers/bin/python" ] || ! "$peers/bin/python" -c 'import scipy, tifff
     }
     "$peers/bin/python" -m pip install --quiet --disable-pip-version-check -r tests/peers/requirements.txt
 fi
+# The report pages are looked at in headless Chromium.
+if ! command -v chromium >/dev/null && ! command -v chromium-browser >/dev/null && ! command -v google-chrome >/dev/null; then
+    if [ "$(id -u)" = 0 ] && command -v apt-get >/dev/null; then
+        apt-get update -qq
+        apt-get install -y -qq chromium >/dev/null
+    else
+        echo "error: the tests of the report pages need Chromium; on Debian: sudo apt-get install chromium" >&2
+        exit 1
+    fi
+fi
 REGAUGE_PYTHON="$PWD/$peers/bin/python"
 export REGAUGE_PYTHON
 exec cargo test --quiet "$@"

@@ -11,7 +11,8 @@ fn help_fits_a_screen_and_every_command_has_an_example() {
     let help = f.regauge(&["--help"]).ends(0).stdout();
     assert!(help.lines().count() <= 24, "{} lines", help.lines().count());
     assert!(help.lines().all(|l| l.chars().count() <= 80), "{help}");
-    for command in ["rescale", "move", "unify", "audit", "describe", "kernels", "replay", "demo"] {
+    for command in ["rescale", "move", "unify", "subtract", "audit", "describe", "kernels", "replay", "demo"]
+    {
         assert!(help.contains(command));
         let own = f.regauge(&[command, "--help"]).ends(0).stdout();
         assert!(own.contains("Example") && own.contains(&format!("regauge {command}")), "{own}");

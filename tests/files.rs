@@ -92,12 +92,14 @@ proptest! {
     }
 
     #[test]
-    fn npy_and_png_come_back_as_they_were(rows in 1usize..60, columns in 1usize..70, kind in 0usize..8, bands in 1usize..5, seed in any::<u64>()) {
+    fn npy_fits_and_png_come_back_as_they_were(rows in 1usize..60, columns in 1usize..70, kind in 0usize..8, bands in 1usize..5, seed in any::<u64>()) {
         let f = Folder::new();
         let r = raster(rows, columns, bands, TYPES[kind], seed);
         let all = Window::whole(&r.header().grid);
         write(&f.path("a.npy"), &r);
         prop_assert_eq!(&open(&f.path("a.npy")).unwrap().read(0..bands, &all).unwrap(), r.samples());
+        write(&f.path("a.fits"), &r);
+        prop_assert_eq!(&open(&f.path("a.fits")).unwrap().read(0..bands, &all).unwrap(), r.samples());
         if kind == 0 || kind == 2 {
             write(&f.path("a.png"), &r);
             prop_assert_eq!(&open(&f.path("a.png")).unwrap().read(0..bands, &all).unwrap(), r.samples());
@@ -183,6 +185,8 @@ fn damaged_files_end_in_errors() {
     let r = raster(10, 12, 3, SampleType::U8, 5);
     write(&f.path("a.npy"), &r);
     write(&f.path("a.png"), &r);
+    write(&f.path("a.fits"), &r);
+    originals.push(("fits", std::fs::read(f.path("a.fits")).unwrap()));
     originals.push(("npy", std::fs::read(f.path("a.npy")).unwrap()));
     originals.push(("png", std::fs::read(f.path("a.png")).unwrap()));
     let mut refused = 0;
@@ -196,7 +200,8 @@ fn damaged_files_end_in_errors() {
                 for _ in 0..1 + next() % 4 {
                     let reach = if next() % 2 == 0 { bytes.len() } else { bytes.len().min(400) };
                     let at = bytes.len() - 1 - next() as usize % reach;
-                    let at = if next() % 4 == 0 { at % 64 } else { at };
+                    let start = if *ending == "fits" { 900 } else { 64 };
+                    let at = if next() % 4 == 0 { at % start } else { at };
                     bytes[at] = next() as u8;
                 }
             }

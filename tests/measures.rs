@@ -199,6 +199,16 @@ fn signal_is_compared_where_both_are_there_pixel_by_pixel_by_area() {
         assert!(local.values.iter().flatten().count() > 100);
         let worst = local.values.iter().flatten().fold(0.0f64, |m, c| m.max(c.abs()));
         assert!(worst < 1e-11, "{back:?}: a part is off by {worst:e}");
+        // Totals: whatever gaps fill in or swallow is accounted for.
+        let rules = Rules {
+            kernel: "bspline:3".parse().unwrap(),
+            values: regauge::resample::Values::Total,
+            ..Rules::default()
+        };
+        let totals = ledger_of(v.clone(), (rows, columns), back, (95, 100), rules).flux;
+        let closure = totals.closure.unwrap();
+        assert!(closure.abs() < 1e-12, "totals, {back:?}: {closure:e}");
+        assert!(totals.filled_at_gaps.unwrap() > 0.0 && totals.lost_in_gaps.unwrap() != 0.0);
         let (a, b) = (ledger.centroid.before.unwrap(), ledger.centroid.after.unwrap());
         assert!((a[0] - b[0]).hypot(a[1] - b[1]) < 0.05, "{a:?} {b:?}");
     }

@@ -281,3 +281,64 @@ fn open_is_the_only_extension_that_may_leave_holes() {
     }
     assert_eq!(Extension::default().to_string(), "half-symmetric");
 }
+
+#[test]
+fn a_constant_with_gaps_stays_that_constant() {
+    let (rows, columns) = (40, 44);
+    let noise = values(rows * columns, 77);
+    // A quarter of the samples is missing.
+    let v: Vec<f64> = noise.iter().map(|n| if *n < -0.5 { f64::NAN } else { 7.3 }).collect();
+    let source = Memory::new(rows, columns, v, SampleType::F64);
+    let turn = |turn, scale| {
+        let about = Motion::about_centre(rows, columns);
+        Motion { turn, scale, ..about }.map().unwrap().invert().unwrap()
+    };
+    let maps = [
+        Map::shift(0.37, -1.25),
+        Map::axes((0.6, -0.2), (1.7, 0.35)),
+        Map::axes((2.4, 0.7), (3.1, 1.0)),
+        turn(17.3, 1.0),
+        turn(-38.0, 0.5),
+        Map { matrix: [[1.1, 0.05, -1.0], [-0.04, 0.9, 2.0], [0.002, -0.001, 1.0]] },
+    ];
+    for kernel in KERNELS {
+        for back in maps {
+            if matches!(*kernel, "polynomial" | "sinc") {
+                // Both lean on whole lines: nothing near a gap is left of them.
+                continue;
+            }
+            let rules = Rules { kernel: kernel.parse().unwrap(), ..Rules::default() };
+            let out = run(&source, (30, 30), &back, &rules, None);
+            let there: Vec<f64> = out.into_iter().filter(|v| !v.is_nan()).collect();
+            assert!(there.len() > 100, "{kernel}, {back:?}: {} left", there.len());
+            let worst = there.iter().fold(0.0f64, |m, v| m.max((v / 7.3 - 1.0).abs()));
+            assert!(worst < 1e-12, "{kernel}, {back:?}: {worst:e}");
+        }
+    }
+}
+
+#[test]
+fn one_gap_harms_no_more_than_the_taps_reach() {
+    let n = 64;
+    let mut v = values(n * n, 78);
+    let whole = Memory::new(n, n, v.clone(), SampleType::F64);
+    v[30 * n + 33] = f64::NAN;
+    let source = Memory::new(n, n, v, SampleType::F64);
+    // Where the cardinal weight of a sample is below 1e-3: 4.8 pixels for bspline:3, 7.5 for bspline:5 (|pole|^d).
+    for (kernel, taps, reach) in [("bspline:3", 4, 4.8), ("bspline:5", 6, 7.5)] {
+        let rules = Rules { kernel: kernel.parse().unwrap(), outside: Outside::Extend, ..Rules::default() };
+        let back = Map::shift(0.4, -0.3);
+        let (with, without) =
+            (run(&source, (n, n), &back, &rules, None), run(&whole, (n, n), &back, &rules, None));
+        let lost = with.iter().filter(|v| v.is_nan()).count();
+        assert!(lost <= taps * taps, "{kernel}: {lost} lost");
+        for (i, (a, b)) in with.iter().zip(&without).enumerate().filter(|(_, (a, _))| !a.is_nan()) {
+            let (r, c) = back.apply((i / n) as f64, (i % n) as f64);
+            let far = (r - 30.0).abs().max((c - 33.0).abs());
+            if far > reach {
+                // What a gap changes there is below its weight.
+                assert!((a - b).abs() < 2e-3, "{kernel} at {r},{c}: {a} for {b}");
+            }
+        }
+    }
+}

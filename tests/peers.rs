@@ -52,3 +52,8 @@ fn totals_are_differences_of_scipys_cumulative_spline() {
 fn fits_files_go_to_and_from_astropy() {
     run("fits_peer");
 }
+
+#[test]
+fn report_pages_work_in_a_browser() {
+    run("page_peer");
+}

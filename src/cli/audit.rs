@@ -5,7 +5,7 @@ use super::progress::Bar;
 use super::unify::way_back;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
-use crate::job::{AuditRules, AuditValues, audit_files, relate};
+use crate::job::{AuditRules, AuditValues, audit_files, relate, write_audit_report};
 use crate::map::MapFile;
 use crate::raster;
 use crate::report::Relation;
@@ -58,6 +58,12 @@ pub struct Arguments {
     /// Print the account as JSON on stdout
     #[arg(long)]
     json: bool,
+    /// One self-contained page (HTML): both rasters, where signal went, displacement, detail
+    #[arg(long, value_name = "FILE.html", help_heading = "Run")]
+    report: Option<PathBuf>,
+    /// Replace a report that exists
+    #[arg(long, help_heading = "Run")]
+    overwrite: bool,
 }
 
 pub fn run(a: &Arguments) -> Result<Outcome> {
@@ -76,6 +82,9 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         memory: a.memory,
     };
     rules.check()?;
+    if let Some(path) = &a.report {
+        raster::check_free(path, a.overwrite)?;
+    }
     let relation = relation(a)?;
     let bar = Bar::new(&a.after.display().to_string(), a.quiet);
     let result = audit_files((&a.before, &a.after), relation, &rules, &command_line(), &bar);
@@ -83,6 +92,12 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     let made = result?;
     if !a.quiet {
         say(&made.summary());
+    }
+    if let Some(path) = &a.report {
+        write_audit_report(path, &made, (&a.before, &a.after), a.missing)?;
+        if !a.quiet {
+            say(&[format!("report: {}", path.display())]);
+        }
     }
     if a.json {
         print_json(&made)?;

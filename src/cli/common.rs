@@ -3,7 +3,7 @@
 use super::progress::Bar;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
-use crate::job::{Conduct, Job, SigmaFrom};
+use crate::job::{Conduct, Job, SigmaFrom, write_report};
 use crate::kernel::{Extension, Kernel};
 use crate::raster::SampleType;
 use crate::report::Ledger;
@@ -69,7 +69,7 @@ impl OutsideOption {
 #[command(next_help_heading = "Uncertainty and gaps")]
 pub struct Planes {
     /// Standard uncertainty of the input: a raster file, a number, or poisson:GAIN,READ (electrons a count, electrons)
-    #[arg(long, value_name = "SIGMA")]
+    #[arg(long, value_name = "SIGMA", allow_hyphen_values = true)]
     pub sigma: Vec<String>,
     /// Where the standard uncertainty of the output goes
     #[arg(long, value_name = "FILE")]
@@ -77,6 +77,9 @@ pub struct Planes {
     /// Where the share of each pixel's weights that found samples goes
     #[arg(long, value_name = "FILE")]
     pub coverage: Option<PathBuf>,
+    /// Of class codes: where the share of each pixel that each class covers goes, one band a class
+    #[arg(long, value_name = "FILE")]
+    pub fractions: Option<PathBuf>,
     /// Quality flags: samples with any of the bits (or any flag but 0) are missing; FILE or FILE:BITS, such as dq.tif:0x11
     #[arg(long, value_name = "FILE[:BITS]")]
     pub mask: Vec<String>,
@@ -115,6 +118,9 @@ pub struct Running {
     /// Threads [default: all cores]
     #[arg(long, value_name = "N")]
     pub threads: Option<usize>,
+    /// One self-contained page (HTML): before and after, where signal went, what the kernel does
+    #[arg(long, value_name = "FILE.html")]
+    pub report: Option<PathBuf>,
     /// Replace outputs that exist
     #[arg(long)]
     pub overwrite: bool,
@@ -239,9 +245,34 @@ pub fn run_job(job: &Job, running: &Running, conduct: &Conduct) -> Result<Ledger
     Ok(made)
 }
 
+/// Refuses, before any work, a report's name that is taken or named for something else as well.
+pub fn check_report(running: &Running, others: &[&std::path::Path]) -> Result<()> {
+    let Some(path) = &running.report else { return Ok(()) };
+    if others
+        .iter()
+        .any(|o| *o == path || o.canonicalize().is_ok_and(|o| path.canonicalize().is_ok_and(|p| o == p)))
+    {
+        return Err(Error::usage(
+            format!("{} is named for two things", path.display()),
+            "give the report a name of its own, such as run.html",
+        ));
+    }
+    crate::raster::check_free(path, running.overwrite)
+}
+
+/// Writes the page of some runs, if one is wanted.
+pub fn report(running: &Running, runs: &[(&Job, &Ledger)]) -> Result<()> {
+    let Some(path) = &running.report else { return Ok(()) };
+    write_report(path, runs)?;
+    if !running.quiet {
+        say(&[format!("report: {}", path.display())]);
+    }
+    Ok(())
+}
+
 /// Tells what a job would take.
-pub fn tell_estimate(job: &Job, conduct: &Conduct, running: &Running) -> Result<Outcome> {
-    let estimate = job.estimate(conduct)?;
+pub fn tell_estimate(job: &Job, conduct: &Conduct, running: &Running, folder_comes: bool) -> Result<Outcome> {
+    let estimate = job.estimate(conduct, folder_comes)?;
     if running.json {
         print_json(&estimate)?;
     }

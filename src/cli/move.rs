@@ -2,8 +2,8 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, about, command_line, conclude, row_and_column, rules,
-    run_job, say_notes, tell_estimate, warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, about, check_report, command_line, conclude, report,
+    row_and_column, rules, run_job, say_notes, tell_estimate, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::job::{Conduct, Job};
@@ -102,10 +102,13 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         overwrite: a.running.overwrite,
         sigma_out: a.planes.sigma_out.clone(),
         coverage: a.planes.coverage.clone(),
+        fractions: a.planes.fractions.clone(),
     };
     if a.running.dry_run {
-        return tell_estimate(&job, &conduct, &a.running);
+        return tell_estimate(&job, &conduct, &a.running, false);
     }
+    check_report(&a.running, &[&job.input, &job.output, &job.ledger_path()])?;
     let ledger = run_job(&job, &a.running, &conduct)?;
+    report(&a.running, &[(&job, &ledger)])?;
     conclude(&[ledger], &a.running)
 }

@@ -2,8 +2,8 @@
 
 use super::Outcome;
 use super::common::{
-    Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say_notes, size,
-    tell_estimate, warn_of_kernel,
+    Planes, Resampling, Running, about, check_report, command_line, conclude, pair, report, rules, run_job,
+    say_notes, size, tell_estimate, warn_of_kernel,
 };
 use crate::error::Result;
 use crate::job::{Conduct, Job};
@@ -76,10 +76,13 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         overwrite: a.running.overwrite,
         sigma_out: a.planes.sigma_out.clone(),
         coverage: a.planes.coverage.clone(),
+        fractions: a.planes.fractions.clone(),
     };
     if a.running.dry_run {
-        return tell_estimate(&job, &conduct, &a.running);
+        return tell_estimate(&job, &conduct, &a.running, false);
     }
+    check_report(&a.running, &[&job.input, &job.output, &job.ledger_path()])?;
     let ledger = run_job(&job, &a.running, &conduct)?;
+    report(&a.running, &[(&job, &ledger)])?;
     conclude(&[ledger], &a.running)
 }

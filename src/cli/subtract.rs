@@ -1,16 +1,18 @@
 //! `regauge subtract`: the difference of two rasters on one grid.
 
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, command_line, rules, say, say_notes, warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, check_report, command_line, rules, say, say_notes,
+    warn_of_kernel,
 };
 use super::progress::Bar;
 use super::unify::way_back;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
 use crate::grid::Grid;
-use crate::job::{Conduct, Job, Subtract};
+use crate::job::{Conduct, Job, Subtract, reduced};
 use crate::map::MapFile;
 use crate::raster;
+use crate::report::{difference_page, write_whole};
 use crate::resample::Values;
 use clap::Args;
 use std::path::{Path, PathBuf};
@@ -59,9 +61,9 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     if rules.values == Values::Label {
         return Err(Error::usage("class codes cannot be subtracted", "unify them and compare the classes"));
     }
-    if a.planes.coverage.is_some() {
+    if a.planes.coverage.is_some() || a.planes.fractions.is_some() {
         return Err(Error::usage(
-            "a difference has no coverage of its own",
+            "a difference has no coverage and no classes of its own",
             "unify both rasters with --coverage first",
         ));
     }
@@ -102,20 +104,28 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         overwrite: a.running.overwrite,
         sigma_out: a.planes.sigma_out.clone(),
         coverage: None,
+        fractions: None,
     };
     if a.running.dry_run {
         let one = Conduct { sigma_out: None, ..conduct };
         for job in [&subtract.a, &subtract.b] {
-            say(&job.estimate(&one)?.summary());
+            say(&job.estimate(&one, false)?.summary());
         }
         return Ok(Outcome::Done);
     }
+    check_report(&a.running, &[&a.a, &a.b, &a.output])?;
     let bar = Bar::new(&a.output.display().to_string(), a.running.quiet);
     let result = subtract.run(&conduct, &bar);
     bar.clear();
     let ledger = result?;
     if !a.running.quiet {
         say(&ledger.summary());
+    }
+    if let Some(path) = &a.running.report {
+        let (values, columns, repeat) = reduced(&a.output)?;
+        let account = serde_json::to_value(&ledger).unwrap_or_default();
+        let page = difference_page(&ledger.summary(), &account, (&values, columns, repeat), &ledger.command)?;
+        write_whole(path, page.as_bytes()).map_err(|e| Error::io(path, "writing the report", e))?;
     }
     if a.running.json {
         print_json(&ledger)?;

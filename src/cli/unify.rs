@@ -2,8 +2,8 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, about, command_line, conclude, pair, rules, run_job, say,
-    say_notes, tell_estimate, warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, about, check_report, command_line, conclude, pair, report,
+    rules, run_job, say, say_notes, tell_estimate, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::grid::{Grid, Span, span};
@@ -14,7 +14,7 @@ use clap::Args;
 use std::collections::HashMap;
 use std::path::{Path, PathBuf};
 
-/// Several rasters onto one grid, each under its own name in a folder. --sigma-out and --coverage name folders as well.
+/// Several rasters onto one grid, each under its own name in a folder. --sigma-out, --coverage and --fractions name folders as well.
 #[derive(Args)]
 #[command(
     group = clap::ArgGroup::new("grid").required(true).args(["onto", "span"]),
@@ -94,6 +94,7 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
             overwrite: a.running.overwrite,
             sigma_out: beside(a.planes.sigma_out.as_deref(), &output),
             coverage: beside(a.planes.coverage.as_deref(), &output),
+            fractions: beside(a.planes.fractions.as_deref(), &output),
         };
         let job = Job {
             input: path.clone(),
@@ -106,25 +107,29 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
         };
         jobs.push((job, conduct));
     }
-    let folders = [Some(&a.out), a.planes.sigma_out.as_ref(), a.planes.coverage.as_ref()];
+    let planes = [&a.planes.sigma_out, &a.planes.coverage, &a.planes.fractions];
+    let folders = std::iter::once(&a.out).chain(planes.into_iter().flatten());
     if a.running.dry_run {
-        // Nothing is written, not even a folder: what would be new there is free.
-        for (job, conduct) in &mut jobs {
-            job.output = job.output.file_name().map(PathBuf::from).unwrap_or_default();
-            *conduct = Conduct { command: Vec::new(), overwrite: true, ..Conduct::default() };
-            tell_estimate(job, conduct, &a.running)?;
+        // Nothing is written, not even a folder.
+        for (job, conduct) in &jobs {
+            tell_estimate(job, conduct, &a.running, !a.out.is_dir())?;
         }
         return Ok(Outcome::Done);
     }
-    for folder in folders.into_iter().flatten() {
+    for folder in folders {
         std::fs::create_dir_all(folder).map_err(|e| Error::io(folder, "making the folder", e))?;
     }
     // All that can be refused is refused before the first raster is touched.
     for (job, conduct) in &jobs {
         job.check(conduct)?;
     }
+    let taken: Vec<&Path> =
+        jobs.iter().flat_map(|(job, _)| [job.input.as_path(), job.output.as_path()]).collect();
+    check_report(&a.running, &taken)?;
     let ledgers =
         jobs.iter().map(|(job, conduct)| run_job(job, &a.running, conduct)).collect::<Result<Vec<_>>>()?;
+    let runs: Vec<(&Job, &crate::report::Ledger)> = jobs.iter().map(|j| &j.0).zip(&ledgers).collect();
+    report(&a.running, &runs)?;
     conclude(&ledgers, &a.running)
 }
 

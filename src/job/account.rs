@@ -103,6 +103,10 @@ impl Account {
 
     /// Takes back what does not count on both sides.
     pub(super) fn take(&mut self, band: usize, signal: f64, modulus: f64, moments: (f64, f64)) {
+        // Totals that came out count wherever they lie; of those that went in, the framed ones are compared.
+        if self.total && self.framed.is_empty() {
+            return;
+        }
         let balances = if self.framed.is_empty() { &mut self.bands } else { &mut self.framed };
         if let Some(b) = balances.get_mut(band) {
             b.take(signal, modulus, moments);

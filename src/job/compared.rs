@@ -6,7 +6,7 @@
 
 use super::account::{Account, as_f64};
 use crate::error::Result;
-use crate::map::Map;
+use crate::map::{Map, polygon};
 use crate::measure::Local;
 use crate::raster::{MissingCodes, Source, Window};
 use crate::resample::{Cells, corners};
@@ -38,6 +38,7 @@ pub(super) fn take_back(
     local: &mut Local,
 ) -> Result<()> {
     let header = source.header();
+    let total = local.is_total();
     let (n, m) = (header.grid.rows, header.grid.columns);
     let edges = |r: &Range<usize>| (r.start as f64 - 0.5, r.end as f64 - 0.5);
     let b = back.bounds(edges(&window.rows), edges(&window.columns));
@@ -66,6 +67,8 @@ pub(super) fn take_back(
                         continue;
                     }
                     let image = corners(back, row as f64, column as f64);
+                    // A total counts with the share of its pixel, a density with the area.
+                    let whole = if total { polygon::area(&image) } else { 1.0 };
                     let mut part = Part { row, column, before: [0.0; 4], after: 0.0 };
                     cells.under(&image, Some((n, m)), |i, k, area| {
                         let (i, k) = (i as usize, k as usize);
@@ -78,7 +81,7 @@ pub(super) fn take_back(
                             part.before[2] += s * i as f64;
                             part.before[3] += s * k as f64;
                         } else if !v.is_nan() && s.is_nan() {
-                            part.after += v * area;
+                            part.after += v * area / whole;
                         }
                     });
                     if part.before[1] != 0.0 || part.after != 0.0 {

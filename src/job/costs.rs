@@ -16,6 +16,18 @@ pub fn costs(
     target: (usize, usize),
     back: &Map,
 ) -> Costs {
+    let (rows, columns, pixels) = operators(plan, rules, source, target, back);
+    measure_costs(&rows, &columns, &pixels)
+}
+
+/// The operators that act on input rows and columns, and pixels to look at.
+pub fn operators<'a>(
+    plan: &Plan,
+    rules: &'a Rules,
+    source: (usize, usize),
+    target: (usize, usize),
+    back: &Map,
+) -> (AxisOperator<'a>, AxisOperator<'a>, Vec<Pixel>) {
     let kernel = &rules.kernel;
     let line = |n: usize, step: f64, way: Way| Axis { source: n, target: n, step, offset: 0.0, way };
     let (rows, columns) = match plan {
@@ -55,7 +67,7 @@ pub fn costs(
     let taps = [&rows, &columns].iter().map(|a| taps_of(a, kernel)).max().unwrap_or(4);
     let count = (4096 / taps.max(1)).clamp(8, 64);
     let pixels = sample_pixels(back, rules.outside, source, target, count);
-    measure_costs(&operator(&rows, rules), &operator(&columns, rules), &pixels)
+    (operator(&rows, rules), operator(&columns, rules), pixels)
 }
 
 fn taps_of(axis: &Axis, kernel: &Kernel) -> usize {

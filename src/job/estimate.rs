@@ -40,13 +40,16 @@ const TRIAL: usize = 512;
 
 impl Job {
     /// Checks the job as [`Job::run`] would, tries a part of it, and tells what the whole would take. Writes nothing.
+    /// `folder_comes`: the output's folder would be made first, so that nothing can be in the way there.
     ///
     /// # Errors
     /// As [`Job::check`], and when the part cannot be read.
-    pub fn estimate(&self, conduct: &Conduct) -> Result<Estimate> {
+    pub fn estimate(&self, conduct: &Conduct, folder_comes: bool) -> Result<Estimate> {
         self.in_pool(|| {
             let ready = self.ready()?;
-            ready.check_output(conduct)?;
+            if !folder_comes {
+                ready.check_output(conduct)?;
+            }
             ready.check_missing(0)?;
             ready.estimate(conduct)
         })

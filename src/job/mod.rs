@@ -6,7 +6,9 @@ mod compared;
 mod costs;
 mod describe;
 mod estimate;
+mod fractions;
 mod planes;
+mod report;
 mod subtract;
 mod windows;
 
@@ -14,6 +16,7 @@ pub use audit::{AuditRules, AuditValues, MAX_DISPLACEMENT, audit, audit_files, r
 pub use describe::{BandStatistics, describe};
 pub use estimate::Estimate;
 pub use planes::SigmaFrom;
+pub use report::{reduced, write_audit_report, write_report};
 pub use subtract::{Difference, DifferenceLedger, Subtract};
 
 use crate::error::{Error, Result};
@@ -66,6 +69,8 @@ pub struct Conduct {
     pub sigma_out: Option<PathBuf>,
     /// Where the share of each output's weights that found samples goes.
     pub coverage: Option<PathBuf>,
+    /// Of class codes: where the share of each output's area that each class covers goes, one band a class.
+    pub fractions: Option<PathBuf>,
 }
 
 /// Told how the work goes on; may stop it.
@@ -121,6 +126,9 @@ impl Job {
             let ready = self.ready()?;
             ready.check_output(conduct)?;
             ready.check_missing(0)?;
+            if let Some(path) = &conduct.fractions {
+                ready.write_fractions(path, conduct.overwrite, progress)?;
+            }
             let sink = raster::create(&self.output, &ready.header, conduct.overwrite)?;
             let planes = Planes::create(&ready.header, conduct)?;
             let ledger = ready.carry_out(Some((sink, planes)), None, &conduct.command, progress)?;
@@ -268,7 +276,9 @@ impl Ready<'_> {
                 "name another ledger",
             ));
         }
-        let beside: Vec<&PathBuf> = [&conduct.sigma_out, &conduct.coverage].into_iter().flatten().collect();
+        self.check_fractions(conduct)?;
+        let beside: Vec<&PathBuf> =
+            [&conduct.sigma_out, &conduct.coverage, &conduct.fractions].into_iter().flatten().collect();
         if conduct.sigma_out.is_some() && self.noise.is_none() {
             return Err(Error::usage(
                 "--sigma-out needs to know the noise of the input",

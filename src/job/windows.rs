@@ -122,6 +122,41 @@ fn upright(
     (axis(source.0, x, j[0], stretch.0), axis(source.1, y, j[1], stretch.1))
 }
 
+/// The response to an edge of unit height along rows: position in input pixels from the edge, and value. Empty for a copy and
+/// for kernels that look at whole lines.
+pub fn step_response(plan: &Plan, rules: &Rules, source: (usize, usize)) -> Vec<(f64, f64)> {
+    if matches!(plan, Plan::Copy { .. }) || matches!(rules.kernel.shape(), Shape::Sinc | Shape::Polynomial) {
+        return Vec::new();
+    }
+    let mut effective = match plan {
+        Plan::RowsAndColumns { rows, .. } => Effective::new(&rules.kernel, rules.edges(), rows),
+        Plan::Overlap { back } | Plan::Majority { back } => {
+            let j = back.jacobian(0.0, 0.0);
+            let a = j[0][0].hypot(j[0][1]);
+            let way = Way::Area(a);
+            let axis = Axis { source: source.0, target: source.0, step: a, offset: 0.0, way };
+            Effective::new(&rules.kernel, rules.edges(), &axis)
+        }
+        _ => upright(plan, rules, source, &plan.back(), (0, 0)).0,
+    };
+    // Far from the line's ends, where nothing is clipped.
+    let middle = (source.0 / 2) as f64;
+    let reach = 6.0 * effective.step().max(1.0);
+    let mut weights = Vec::new();
+    (0..=240)
+        .map(|i| {
+            let x = reach * (i as f64 / 120.0 - 1.0);
+            effective.look_at(middle + 0.5 + x);
+            let first = effective.unfolded(0, &mut weights);
+            // Samples beyond the edge are 1; it lies halfway between two of them. Totals are shown as densities.
+            let all: f64 = weights.iter().sum();
+            let beyond: f64 =
+                weights.iter().zip(first..).filter(|(_, k)| *k as f64 > middle).map(|(w, _)| w).sum();
+            (x, beyond / if all != 0.0 { all } else { 1.0 })
+        })
+        .collect()
+}
+
 fn quotient<'a>(together: impl Iterator<Item = &'a f64>, alone: f64) -> f64 {
     if alone > 0.0 { together.map(|w| w * w).sum::<f64>() / alone } else { 1.0 }
 }

@@ -210,6 +210,11 @@ impl Local {
         cell.after.add(-after);
     }
 
+    /// Whether samples are sums over their pixel.
+    pub fn is_total(&self) -> bool {
+        self.total
+    }
+
     /// Output pixels of a coarse cell: rows, columns.
     pub fn step(&self) -> (usize, usize) {
         self.step

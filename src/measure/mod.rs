@@ -9,6 +9,6 @@ mod sum;
 
 pub use flux::{Balance, Frame, closure};
 pub use local::Local;
-pub use response::{AxisOperator, Costs, Pixel, measure_costs};
+pub use response::{AxisOperator, Costs, Pixel, measure_costs, transfer_curve};
 pub use ringing::step_overshoot;
 pub use sum::Sum;

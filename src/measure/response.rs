@@ -203,6 +203,34 @@ pub fn measure_costs(rows: &AxisOperator, columns: &AxisOperator, pixels: &[Pixe
     }
 }
 
+/// Frequency (cycles per input pixel, 0 to 1/2 in `steps` steps), and the modulus of the transfer there: its mean over the
+/// pixels and its least, of the axis that loses more.
+pub fn transfer_curve(
+    rows: &AxisOperator,
+    columns: &AxisOperator,
+    pixels: &[Pixel],
+    steps: usize,
+) -> Vec<[f64; 3]> {
+    let axes = (Axis::new(rows), Axis::new(columns));
+    (0..=steps)
+        .map(|i| {
+            let f = 0.5 * i as f64 / steps.max(1) as f64;
+            let along = |axis: &Axis, pick: fn(&Pixel) -> f64| {
+                let (mut sum, mut least) = (0.0, f64::INFINITY);
+                for p in pixels {
+                    let h = axis.transfer(pick(p), f);
+                    let modulus = h.0.hypot(h.1);
+                    sum += modulus;
+                    least = f64::min(least, modulus);
+                }
+                (sum / pixels.len().max(1) as f64, least)
+            };
+            let (a, b) = (along(&axes.0, |p| p.at.0), along(&axes.1, |p| p.at.1));
+            [f, a.0.min(b.0), a.1.min(b.1)]
+        })
+        .collect()
+}
+
 /// Where a falling modulus first reaches 1/2, by a walk and a bisection; `limit` if it does not.
 fn half_power(modulus: impl Fn(f64) -> f64, limit: f64) -> f64 {
     const STEPS: usize = 32;

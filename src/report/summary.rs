@@ -50,14 +50,42 @@ impl Ledger {
             ));
         }
         if let Some(c) = self.flux.closure {
+            let what = if self.values == "total" {
+                "counts, all accounted for"
+            } else {
+                "signal over the common region"
+            };
             lines.push(format!(
-                "signal over the common region: {:+.2e} of its sum{}",
+                "{what}: {:+.2e} of its sum{}",
                 c,
                 match self.flux.closed {
                     Some(true) => " (within the tolerance)",
                     Some(false) => " (TOLERANCE EXCEEDED)",
                     None => "",
                 }
+            ));
+        }
+        let told = |v: Option<f64>| v.filter(|v| v.abs() > 0.0);
+        if let Some(left) = told(self.flux.left_frame) {
+            lines.push(format!("left the frame: {left:.6e} of {:.6e}", self.flux.before.unwrap_or(0.0)));
+        }
+        if let (Some(filled), Some(lost)) = (told(self.flux.filled_at_gaps), self.flux.lost_in_gaps) {
+            lines.push(format!(
+                "at gaps: {filled:.3e} filled in for what is missing, {lost:.3e} fell into missing pixels"
+            ));
+        }
+        if let Some(moved) = told(self.flux.limited) {
+            let to = if self.values == "total" { "handed to neighbours" } else { "cut off" };
+            let rest = told(self.flux.beyond_limits)
+                .map_or(String::new(), |b| format!("; {b:.3e} found no room and stays beyond"));
+            lines.push(format!(
+                "held to the range around: {} pixels, {moved:.3e} {to}{rest}",
+                self.pixels.limited
+            ));
+        }
+        if let (Some(of_10), true) = (self.noise.sum_underestimated.of_10, self.method != "copy") {
+            lines.push(format!(
+                "sums over 10 x 10 pixels are {of_10:.2} times as uncertain as independent pixels would say"
             ));
         }
         let p = &self.pixels;

@@ -176,6 +176,11 @@ impl Effective {
         run.first
     }
 
+    /// Input samples per output sample, without sign.
+    pub fn step(&self) -> f64 {
+        self.axis.step.abs()
+    }
+
     /// The same axis with output 0 at another place.
     pub fn look_at(&mut self, offset: f64) {
         self.axis.offset = offset;
