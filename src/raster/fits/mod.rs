@@ -3,6 +3,7 @@
 
 mod cards;
 mod carry;
+mod fresh;
 mod projection;
 mod read;
 mod sip;

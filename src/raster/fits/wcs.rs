@@ -4,7 +4,8 @@
 //! projection the grid's world is these, and its reference system is the [`projection`]'s line; two such rasters meet only
 //! if both agree. On writing only CRPIX and the matrix change: whatever is not linear stays right.
 
-use super::cards::{Cards, keyword, number_of, padded, real, text, with_comment};
+use super::cards::{Cards, keyword, number_of, real, with_comment};
+use super::fresh::of_grid;
 use super::{projection, sip};
 use crate::error::Result;
 use crate::grid::{Grid, World};
@@ -203,7 +204,7 @@ impl Wcs {
             return out;
         }
         out.retain(|p, _| {
-            !matches!(p, Part::Turn(_)) && !(self.form == Form::Cd && matches!(p, Part::Delta(_)))
+            !(matches!(p, Part::Turn(_)) || self.form == Form::Cd && matches!(p, Part::Delta(_)))
         });
         // A scaling can stand in CDELT alone where the axes of the image are on their own and PC commutes with it.
         let apart = |i: usize, j: usize| self.entry(i, j) == 0.0;
@@ -393,49 +394,4 @@ pub fn corrected(cards: &[String], grid: &Grid, path: &Path) -> Result<Vec<Strin
     }
     out.extend(fresh.into_iter().map(|(key, value)| real(&key, value)));
     Ok(out)
-}
-
-/// Units of length and angle as FITS writes them; another unit is a comment, which no reader trips over.
-fn unit_cards(unit: &str) -> Vec<String> {
-    let short = match unit {
-        "metre" | "meter" => "m",
-        "µm" | "μm" => "um",
-        "degree" | "degrees" => "deg",
-        "Å" => "Angstrom",
-        u => u,
-    };
-    const KNOWN: &[&str] = &[
-        "km", "m", "cm", "mm", "um", "nm", "pm", "Angstrom", "deg", "arcmin", "arcsec", "mas", "rad", "s",
-        "Hz",
-    ];
-    if KNOWN.contains(&short) {
-        return vec![text("CUNIT1", short), text("CUNIT2", short)];
-    }
-    vec![padded(&format!("COMMENT unit of the world coordinates: {unit}"))]
-}
-
-/// Cards for a grid that the carried ones do not describe.
-pub fn of_grid(grid: &Grid) -> Vec<String> {
-    let Some(w) = grid.world else { return Vec::new() };
-    let unit = grid.unit.as_deref().map(unit_cards).unwrap_or_default();
-    let mut out = Vec::new();
-    if let Some(projected) = grid.crs.as_deref().and_then(projection::cards) {
-        out.extend(projected);
-        // CD (p - CRPIX) vanishes at the reference pixel.
-        let det = w[0][0] * w[1][1] - w[0][1] * w[1][0];
-        let zero = [w[0][1] * w[1][2] - w[1][1] * w[0][2], w[1][0] * w[0][2] - w[0][0] * w[1][2]];
-        out.extend([0, 1].map(|i| real(&format!("CRPIX{}", i + 1), zero[i] / det + 1.0)));
-    } else {
-        for (i, row) in w.iter().enumerate() {
-            out.push(text(&format!("CTYPE{}", i + 1), "LINEAR"));
-            out.push(real(&format!("CRPIX{}", i + 1), 1.0));
-            out.push(real(&format!("CRVAL{}", i + 1), row[2]));
-        }
-        out.extend(grid.crs.as_deref().map(|crs| text("WCSNAME", crs)));
-    }
-    out.extend(unit);
-    for (i, row) in w.iter().enumerate() {
-        out.extend([0, 1].map(|j| real(&format!("CD{}_{}", i + 1, j + 1), row[j])));
-    }
-    out
 }
