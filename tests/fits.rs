@@ -491,3 +491,44 @@ fn damage_is_told_by_its_card() {
     f.regauge(&["rescale", "flat.fits", "out.fits", "--factor", "2"]).ends(0);
     assert!(Cards::read(&f.path("out.fits")).text("CRPIX1").is_none());
 }
+
+#[test]
+fn spoiled_cards_end_in_results() {
+    let f = Folder::new();
+    let mut cards = sky("sip");
+    cards.extend([
+        ("PC1_2", "0.5".into()),
+        ("PV2_1", "1.0".into()),
+        ("BLANK", "3".into()),
+        ("BSCALE", "2.0".into()),
+    ]);
+    let good = fits(&[53, 37, 2], &cards);
+    let mut state = 0x9e37_79b9_7f4a_7c15u64;
+    let mut next = |n: usize| {
+        state ^= state << 13;
+        state ^= state >> 7;
+        state ^= state << 17;
+        state as usize % n
+    };
+    let (mut refused, mut written) = (0, 0);
+    for _ in 0..3000 {
+        let mut bytes = good.clone();
+        // Characters that mean something in cards, where cards stand.
+        for _ in 0..1 + next(6) {
+            bytes[80 + next(cards.len() * 80 + 480)] = b" 0123456789.-+ED_='/ABCT"[next(24)];
+        }
+        std::fs::write(f.path("b.fits"), &bytes).unwrap();
+        let Ok(source) = open(&f.path("b.fits")) else {
+            refused += 1;
+            continue;
+        };
+        let mut header = source.header().clone();
+        let window = Window { rows: 0..header.grid.rows.min(9), columns: 0..header.grid.columns.min(9) };
+        source.read(0..header.bands.min(2), &window).unwrap();
+        // Its cards on another grid: written, or refused.
+        header.grid = header.grid.stepped(4, 5, (1.5, 2.0), (0.25, 3.0));
+        header.bands = 1;
+        written += usize::from(create(&f.path("c.fits"), &header, true).is_ok());
+    }
+    assert!(refused > 100 && written > 200, "{refused} refused, {written} written");
+}
