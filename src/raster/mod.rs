@@ -276,7 +276,8 @@ fn format_of(path: &Path) -> Result<Format> {
 pub fn check_writable(path: &Path, header: &Header) -> Result<()> {
     match format_of(path)? {
         Format::Picture => picture::check_writable(path, header),
-        Format::Npy | Format::Memory | Format::Fits => Ok(()),
+        Format::Fits => fits::check_writable(path, header),
+        Format::Npy | Format::Memory => Ok(()),
         Format::Tiff => tiff::check_writable(path, header),
     }
 }

@@ -49,6 +49,8 @@ pub struct Storage {
     pub texts: Vec<(u16, String)>,
     /// FITS cards that travel, 80 characters each; those of the linear world coordinates are corrected on the way.
     pub cards: Vec<String>,
+    /// Lengths of the axes behind rows and columns, for cubes of more than one; their product is the number of bands.
+    pub planes: Vec<usize>,
     /// What the user should be told about what was not understood or not carried.
     pub notes: Vec<String>,
 }

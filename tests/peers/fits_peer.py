@@ -149,6 +149,121 @@ regauge("rescale", path("l.tif"), path("l2.fits"), "--factor", "0.5", "--overwri
 p, q = WCS(fits.getheader(path("l.fits"))), WCS(fits.getheader(path("l2.fits")))
 check("linear by way of TIFF", np.array(q.all_pix2world(3, 4, 0)), np.array(p.all_pix2world(6.5, 8.5, 0)), 1e-12)
 
+# Descriptions of more kinds: the sky by astropy, SIP and projection parameters included, before and after.
+def sky_of(header, at):
+    with warnings.catch_warnings():
+        # A slit has one axis more in the world than in the image.
+        warnings.simplefilter("ignore")
+        w = WCS(header)
+    at = np.asarray(at, float)
+    rest = [np.zeros(len(at))] * (w.naxis - 2)
+    return np.array(w.all_pix2world(at[:, 1], at[:, 0], *rest, 0))
+
+
+def tpv():
+    h = sky_header("cd")
+    h["CTYPE1"], h["CTYPE2"] = "RA---TPV", "DEC--TPV"
+    h["PV1_1"], h["PV1_2"], h["PV1_4"], h["PV2_1"], h["PV2_5"] = 1.001, 0.002, 0.3, 0.999, -0.2
+    return h
+
+
+def sip():
+    h = sky_header("cd")
+    h["CTYPE1"], h["CTYPE2"] = "RA---TAN-SIP", "DEC--TAN-SIP"
+    h["A_ORDER"], h["A_2_0"], h["A_0_2"], h["A_1_2"] = 3, 2e-4, -1e-4, 3e-6
+    h["B_ORDER"], h["B_1_1"], h["B_3_0"] = 3, 1e-4, -2e-6
+    return h
+
+
+def galactic():
+    h = sky_header("pc")
+    h["CTYPE1"], h["CTYPE2"], h["CRVAL1"], h["CRVAL2"] = "GLON-CAR", "GLAT-CAR", 30.0, 0.0
+    h["CUNIT1"], h["CUNIT2"] = "deg", "deg"
+    return h
+
+
+def swapped():
+    h = sky_header("delta")
+    h["CTYPE1"], h["CTYPE2"], h["CRVAL1"], h["CRVAL2"], h["CROTA1"] = "DEC--SIN", "RA---SIN", 22.0145, 83.633, 7.0
+    h["CDELT1"], h["CDELT2"] = 5e-4, -7e-4
+    return h
+
+
+def slit():
+    h = fits.Header()
+    h["WCSAXES"] = 3
+    h["CTYPE1"], h["CTYPE2"], h["CTYPE3"] = "WAVE", "RA---TAN", "DEC--TAN"
+    h["CUNIT1"], h["CUNIT2"], h["CUNIT3"] = "nm", "deg", "deg"
+    h["CRVAL1"], h["CRVAL2"], h["CRVAL3"] = 500.0, 83.6, 22.0
+    h["CRPIX1"], h["CRPIX2"], h["CRPIX3"] = 20.0, 15.0, 1.0
+    h["CDELT1"], h["CDELT2"], h["CDELT3"] = 0.1, 5e-4, 5e-4
+    h["PC2_2"], h["PC2_3"], h["PC3_2"], h["PC3_3"] = 0.8, -0.6, 0.6, 0.8
+    return h
+
+
+PIXEL = 5e-4
+for name, h in (("tpv", tpv()), ("sip", sip()), ("galactic", galactic()), ("swapped", swapped()), ("slit", slit())):
+    fits.PrimaryHDU(sample("f4"), h).writeto(path("w.fits"), overwrite=True)
+    before = fits.getheader(path("w.fits"))
+    for factors in ((0.4, 0.4), (0.4, 0.8), (1.7, 0.9)):
+        regauge("rescale", path("w.fits"), path("w2.fits"), "--factor", f"{factors[0]},{factors[1]}", "--overwrite", "--quiet")
+        after = read("w2.fits")[1]
+        a, b = sky_of(before, at), sky_of(after, (at + 0.5) * factors - 0.5)
+        # The slit's wavelengths are in nanometres there and metres here, and 0.1 of them a pixel.
+        off = np.abs(a - b).max() / PIXEL
+        true(f"{name} {factors}: within 1e-8 px ({off:.1e})", off < 1e-8)
+# A shift moves the content and leaves the lattice; a frame that grows keeps its place in the sky.
+fits.PrimaryHDU(sample("f4"), sky_header("pc")).writeto(path("w.fits"), overwrite=True)
+before = fits.getheader(path("w.fits"))
+regauge("move", path("w.fits"), path("w2.fits"), "--shift", "1.25,-0.75", "--overwrite", "--quiet")
+true("a kept frame keeps its sky", np.array_equal(sky_of(before, at), sky_of(read("w2.fits")[1], at)))
+regauge("move", path("w.fits"), path("w2.fits"), "--shift=-5.5,-3.5", "--frame", "fit", "--overwrite", "--quiet")
+after = read("w2.fits")[1]
+a, b = sky_of(before, at), sky_of(after, at - (-6, -4))
+true("a fitted frame lies where it was", np.abs(a - b).max() / PIXEL < 1e-9)
+# Moved by a map onto another pointing: the sky of the reference.
+other = tpv()
+other["CRVAL1"], other["CRVAL2"], other["RADESYS"], other["EQUINOX"] = 10.0, -41.0, "FK5", 2000.0
+fits.PrimaryHDU(sample("f4"), other).writeto(path("r.fits"), overwrite=True)
+with open(path("map.json"), "w", encoding="utf-8") as f:
+    size = f'{{"rows": {ROWS}, "columns": {COLUMNS}}}'
+    f.write(f'{{"model": "shift", "matrix": [[1,0,2],[0,1,-3],[0,0,1]], "moving": {size}, "reference": {size}}}')
+regauge("unify", path("w.fits"), "--onto", path("r.fits"), "--map", path("map.json"), "--out", path("bymap"), "--overwrite", "--quiet")
+got = read("bymap/w.fits")[1]
+true("by a map: the reference's sky", np.abs(sky_of(got, at) - sky_of(fits.getheader(path("r.fits")), at)).max() / PIXEL < 1e-9)
+true("by a map: its equinox", got["RADESYS"] == "FK5" and got["EQUINOX"] == 2000.0)
+# Cubes of four axes keep them.
+h = sky_header("cd")
+h["CTYPE3"], h["CRVAL3"], h["CRPIX3"], h["CD3_3"] = "FREQ", 1.4e9, 1.0, 1e6
+h["CTYPE4"], h["CRVAL4"], h["CRPIX4"], h["CD4_4"] = "STOKES", 1.0, 1.0, 1.0
+cube = sample("f4", (4, 1, ROWS, COLUMNS))
+fits.PrimaryHDU(cube, h).writeto(path("q.fits"), overwrite=True)
+copied("q.fits", "q2.fits")
+data, got = read("q2.fits")
+true("cube of four axes", np.array_equal(data, cube) and WCS(got).wcs.ctype[3] == "STOKES")
+# A code of floating point becomes NaN; whole numbers keep theirs, as stored numbers.
+a = sample("f4")
+a[4, 5] = -9999
+np.save(path("g.npy"), a)
+regauge("move", path("g.npy"), path("g.fits"), "--shift", "0,0", "--missing=-9999", "--overwrite", "--quiet")
+got = read("g.fits")[0]
+true("a code becomes NaN", np.isnan(got[4, 5]) and np.array_equal(np.delete(got.ravel(), 4 * COLUMNS + 5), np.delete(a.ravel(), 4 * COLUMNS + 5)))
+np.save(path("g.npy"), sample("u2"))
+regauge("move", path("g.npy"), path("g.fits"), "--shift", "3,0", "--missing", "65535", "--overwrite", "--quiet")
+with fits.open(path("g.fits"), do_not_scale_image_data=True) as f:
+    true("BLANK is a stored number", f[0].header["BLANK"] == 32767 and (f[0].data[:3] == 32767).all())
+# The primary header speaks for its extension; a tail that is no HDU harms nothing.
+p = fits.PrimaryHDU()
+p.header["TELESCOP"], p.header["OBJECT"] = "invented", "elsewhere"
+i = fits.ImageHDU(sample("f4"), sky_header("cd"), name="SCI")
+i.header["OBJECT"], i.header["LTV1"] = "field", 3.0
+fits.HDUList([p, i]).writeto(path("p.fits"), overwrite=True)
+with open(path("p.fits"), "ab") as f:
+    f.write(b"\0" * 1000)
+done = regauge("rescale", path("p.fits"), path("p2.fits"), "--factor", "0.5", "--overwrite")
+got = read("p2.fits")[1]
+true("primary's cards", got["TELESCOP"] == "invented" and got["OBJECT"] == "field" and "LTV1" not in got and "LTV1" in done.stderr)
+
 # Damage is told by the card.
 with open(path("l.fits"), "rb") as f:
     good = f.read()
