@@ -115,7 +115,7 @@ fn compare(
     }
 }
 
-const SIZE: (usize, usize) = (13, 12);
+const SIZE: (usize, usize) = (12, 11);
 
 fn maps() -> Vec<(&'static str, (usize, usize), Map)> {
     let about = Motion::about_centre(SIZE.0, SIZE.1);
@@ -124,7 +124,7 @@ fn maps() -> Vec<(&'static str, (usize, usize), Map)> {
         ("shift", SIZE, Map::shift(0.37, -1.5)),
         ("grow", (20, 17), Map::axes((0.65, -0.2), (0.7, 0.1))),
         ("reduce", (6, 5), Map::axes((2.2, 0.6), (2.4, 0.7))),
-        ("quarter turn and shift", (12, 13), Map::affine([[0.0, 1.0, 0.3], [-1.0, 0.0, 11.2]])),
+        ("quarter turn and shift", (11, 12), Map::affine([[0.0, 1.0, 0.3], [-1.0, 0.0, 10.2]])),
         ("turn", SIZE, turn(23.0, 1.0)),
         ("turn and reduce", (9, 9), turn(23.0, 0.6)),
         ("projective", (9, 9), Map { matrix: [[1.1, 0.05, 0.3], [-0.04, 1.2, 0.4], [0.004, -0.003, 1.0]] }),
@@ -168,7 +168,7 @@ fn sigma_under_every_extension() {
         "point-symmetric",
         "periodic",
     ] {
-        for kernel in ["keys", "bspline:3", "area"] {
+        for kernel in ["bspline:3", "area"] {
             for (name, target, back) in maps() {
                 if name == "projective" {
                     continue;
@@ -187,7 +187,7 @@ fn sigma_under_every_extension() {
 
 #[test]
 fn sigma_of_totals_gaps_and_least_squares() {
-    for kernel in ["linear", "keys", "bspline:3", "bspline:5", "lanczos:3", "area"] {
+    for kernel in ["linear", "keys", "bspline:3", "area"] {
         for (name, target, back) in maps() {
             let rules = Rules { kernel: kernel.parse().unwrap(), values: Values::Total, ..Rules::default() };
             compare(&format!("totals, {kernel}, {name}"), SIZE, target, &back, &rules, &[]);

@@ -24,6 +24,9 @@ struct Part {
     after: f64,
 }
 
+/// Samples of the input that are looked at at a time.
+const AT_A_TIME: usize = 1 << 22;
+
 /// Takes back what does not count on both sides, for one block of all bands. `values` gives a band's rows, NaN = missing.
 ///
 /// # Errors
@@ -34,6 +37,31 @@ pub(super) fn take_back(
     back: &Map,
     window: &Window,
     values: &[Vec<f64>],
+    (before, after): (&mut Account, &mut Account),
+    local: &mut Local,
+) -> Result<()> {
+    // Where one output pixel covers many samples, few rows of a block cover much of the input.
+    let j = back.jacobian(window.rows.start as f64, window.columns.start as f64);
+    let extent = |v: [f64; 2]| v[0].abs() + v[1].abs() + 1.0;
+    let under_row = window.columns.len() as f64 * extent(j[0]) * extent(j[1]);
+    let rows = ((AT_A_TIME as f64 / under_row) as usize).clamp(1, window.rows.len().max(1));
+    let width = window.columns.len();
+    for start in window.rows.clone().step_by(rows) {
+        let part =
+            Window { rows: start..(start + rows).min(window.rows.end), columns: window.columns.clone() };
+        let at = (start - window.rows.start) * width..(part.rows.end - window.rows.start) * width;
+        let values: Vec<&[f64]> = values.iter().map(|v| &v[at.clone()]).collect();
+        take_back_rows(source, codes, back, &part, &values, (&mut *before, &mut *after), local)?;
+    }
+    Ok(())
+}
+
+fn take_back_rows(
+    source: &dyn Source,
+    codes: &MissingCodes,
+    back: &Map,
+    window: &Window,
+    values: &[&[f64]],
     accounts: (&mut Account, &mut Account),
     local: &mut Local,
 ) -> Result<()> {

@@ -419,7 +419,8 @@ impl Engine<'_> {
         // Variances, and the samples' noise that they are made of.
         let noise = if self.extras.noise.is_some() { 24 } else { 0 };
         let out = out.saturating_add(height.saturating_mul(width).saturating_mul(noise + 8 * header.bands));
-        let stored = stored + noise;
+        // Held values are compared with the samples around, in f64.
+        let stored = stored + noise + if self.limits() { 8 } else { 0 };
         let (rows, columns, between) = match &self.plan {
             Plan::Copy { .. } => {
                 return height

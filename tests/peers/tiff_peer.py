@@ -80,6 +80,16 @@ with tifffile.TiffFile(path("m2.tif")) as t:
     true("matrix form", np.allclose(got[[0, 1, 3, 4, 5, 7]], (3, 1, 1000, 1, -3, 2000)))
     true("matrix CRS", int(t.pages[0].geotiff_tags["ProjectedCSTypeGeoKey"]) == 32633)
 
+# A mask page is read by itself: 1 where a sample is there (TIFF 6.0, PhotometricInterpretation 4).
+a, there = sample((40, 37), "u2"), np.random.default_rng(1).random((40, 37)) > 0.2
+for tile in (None, (16, 16)):
+    with tifffile.TiffWriter(path("masked.tif")) as w:
+        w.write(a, tile=tile, compression="deflate")
+        w.write(there, photometric=4, subfiletype=4, tile=tile)
+    regauge("move", path("masked.tif"), path("masked.npy"), "--shift", "0,0", "--overwrite", "--quiet")
+    got = np.load(path("masked.npy"))
+    true(f"mask page {tile}", got.dtype == np.float32 and np.array_equal(np.isnan(got), ~there) and np.array_equal(got[there], a[there]))
+
 # What is not read is refused by name.
 for bad, word in ((np.zeros((8, 8), "c8"), "complex"), (np.zeros((8, 8), "u8"), "64 bits"), (np.zeros((8, 8), "f2"), "16 bits")):
     tifffile.imwrite(path("bad.tif"), bad)
