@@ -56,6 +56,38 @@ pub struct Nodes<'a, T> {
     pub origin: (i64, i64),
 }
 
+/// Where a mask's plane is 1, in squares of [`Plain::SIDE`].
+pub struct Plain {
+    flags: Array2<bool>,
+    size: (usize, usize),
+}
+
+impl Plain {
+    const SIDE: usize = 16;
+
+    /// Looks at a plane.
+    pub fn of<T: Real>(values: &Array2<T>) -> Self {
+        let size = values.dim();
+        let mut flags = Array2::from_elem((size.0.div_ceil(Self::SIDE), size.1.div_ceil(Self::SIDE)), true);
+        for ((r, c), v) in values.indexed_iter() {
+            if (v.to_f64() - 1.0).abs() > 0.1 * T::UNITY_SLACK {
+                flags[(r / Self::SIDE, c / Self::SIDE)] = false;
+            }
+        }
+        Plain { flags, size }
+    }
+
+    /// Whether all is 1 from the first to the last row and column; what lies beyond the plane is not known to be.
+    fn holds(&self, rows: (i64, i64), columns: (i64, i64)) -> bool {
+        let inside = |r: (i64, i64), n: usize| r.0 >= 0 && r.1 < n as i64;
+        if !(inside(rows, self.size.0) && inside(columns, self.size.1)) {
+            return false;
+        }
+        let squares = |r: (i64, i64)| r.0 as usize / Self::SIDE..=r.1 as usize / Self::SIDE;
+        squares(rows).all(|i| squares(columns).all(|k| self.flags[(i, k)]))
+    }
+}
+
 /// How the gather weighs: by the weights themselves or by their moduli.
 #[derive(Clone, Copy, Debug, PartialEq, Eq)]
 pub enum By {
@@ -78,7 +110,13 @@ pub fn stretch_at(back: &Map, row: f64, column: f64) -> (f64, f64) {
 
 /// Evaluates the block of outputs `rows` x `columns`; NaN where there is nothing: outside, or out of an open raster's
 /// reach.
-pub(super) fn gather<T: Real>(look: &Look, plane: &Nodes<T>, by: By, span: &Span) -> Array2<T> {
+pub(super) fn gather<T: Real>(
+    look: &Look,
+    plane: &Nodes<T>,
+    by: By,
+    span: &Span,
+    plain: Option<&Plain>,
+) -> Array2<T> {
     let mut out = Array2::<T>::from_elem(span.size(), T::from_f64(f64::NAN));
     out.axis_chunks_iter_mut(ndarray::Axis(0), 4).into_par_iter().enumerate().for_each_init(
         || Local::new(look),
@@ -86,7 +124,9 @@ pub(super) fn gather<T: Real>(look: &Look, plane: &Nodes<T>, by: By, span: &Span
             for (j, mut line) in lines.rows_mut().into_iter().enumerate() {
                 let r = (span.rows.start + (4 * group + j) as i64) as f64;
                 for (v, c) in line.iter_mut().zip(span.columns.clone()) {
-                    local.pixel(look, plane, by, r, c as f64, v);
+                    if !local.is_plain(look, plane, plain, r, c as f64, v) {
+                        local.pixel(look, plane, by, r, c as f64, v);
+                    }
                 }
             }
         },
@@ -110,6 +150,30 @@ impl<T: Real> Local<T> {
             cast: Default::default(),
             sums: Vec::new(),
         }
+    }
+
+    /// Sets a pixel of a mask to 1 where all that it looks at is 1.
+    fn is_plain(
+        &mut self,
+        look: &Look,
+        plane: &Nodes<T>,
+        plain: Option<&Plain>,
+        row: f64,
+        column: f64,
+        out: &mut T,
+    ) -> bool {
+        let Some(plain) = plain else { return false };
+        let Some((x, y)) = look.position(row, column, &mut self.weighers) else { return true };
+        let around = |x: f64, radius: f64, origin: i64| {
+            ((x - radius).floor() as i64 - origin, (x + radius).ceil() as i64 - origin)
+        };
+        let rows = around(x, self.weighers.0.radius(), plane.origin.0);
+        let columns = around(y, self.weighers.1.radius(), plane.origin.1);
+        let is = plain.holds(rows, columns);
+        if is {
+            *out = T::ONE;
+        }
+        is
     }
 
     fn pixel(&mut self, look: &Look, plane: &Nodes<T>, by: By, row: f64, column: f64, out: &mut T) {

@@ -3,7 +3,7 @@
 use super::axis::{Axis, Way, is_inside};
 use super::blocks::Engine;
 use super::chain::{Chain, Part, Stretch};
-use super::gather::{By, Look, Nodes, gather};
+use super::gather::{By, Look, Nodes, Plain, gather};
 use super::majority::majority;
 use super::overlap::{Give, overlap};
 use super::patch::Patch;
@@ -267,7 +267,7 @@ impl<T: Real> Prepared<'_, T> {
             Passes::Gather { rows, columns, look, .. } => {
                 let Some(axes) = self.axes_of(rows, columns) else { return nothing() };
                 let values = self.plane(&axes, band, what, Part::Whole);
-                self.look_at(look, &values, By::Weights)
+                self.look_at(look, &values, By::Weights, None)
             }
             Passes::Overlap { rows, columns, back } => {
                 let Some(axes) = self.axes_of(rows, columns) else { return nothing() };
@@ -345,12 +345,14 @@ impl<T: Real> Prepared<'_, T> {
             }
             Passes::Gather { rows, columns, look, .. } => {
                 let Some(axes) = self.axes_of(rows, columns) else { return empty() };
-                let whole =
-                    self.look_at(look, &self.plane(&axes, band, Plane::Mask, Part::Whole), By::Weights);
+                let whole = self.plane(&axes, band, Plane::Mask, Part::Whole);
+                let plain = Plain::of(&whole);
+                let whole = self.look_at(look, &whole, By::Weights, Some(&plain));
                 let raw = self.plane(&axes, band, Plane::Mask, Part::Weights);
                 let filtered = rows.is_filtered() || columns.is_filtered();
-                let taps = filtered.then(|| self.look_at(look, &raw, By::Weights));
-                Mask { whole, taps, moduli: Some(self.look_at(look, &raw, By::Moduli)) }
+                let plain = Plain::of(&raw);
+                let taps = filtered.then(|| self.look_at(look, &raw, By::Weights, Some(&plain)));
+                Mask { whole, taps, moduli: Some(self.look_at(look, &raw, By::Moduli, Some(&plain))) }
             }
             Passes::Overlap { rows, columns, back } => {
                 let Some(axes) = self.axes_of(rows, columns) else { return empty() };
@@ -393,8 +395,8 @@ impl<T: Real> Prepared<'_, T> {
         out.mapv(T::from_f64)
     }
 
-    fn look_at(&self, look: &Look, values: &Array2<T>, by: By) -> Array2<T> {
-        gather(look, &Nodes { values, origin: self.origin }, by, &self.span)
+    fn look_at(&self, look: &Look, values: &Array2<T>, by: By, plain: Option<&Plain>) -> Array2<T> {
+        gather(look, &Nodes { values, origin: self.origin }, by, &self.span, plain)
     }
 
     fn over(&self, back: &Map, values: &Array2<T>, give: Give) -> Array2<T> {

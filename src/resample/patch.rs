@@ -120,6 +120,22 @@ impl Patch {
         with_samples!(&self.samples, v => has_missing(&v[band * len..(band + 1) * len], &self.missing))
     }
 
+    /// Whether every sample of an extended row is there.
+    pub fn is_whole_row(&self, band: usize, row: usize) -> bool {
+        if self.columns.places.contains(&Place::Absent) {
+            return false;
+        }
+        match self.rows.places[row] {
+            Place::Constant(_) => true,
+            Place::Sample(r) => {
+                let at = (band * self.rows.len + r) * self.columns.len;
+                let width = self.columns.len;
+                with_samples!(&self.samples, v => !row_has_missing(&v[at..at + width], &self.missing))
+            }
+            Place::Absent | Place::Turned { .. } => false,
+        }
+    }
+
     /// Writes one extended row of values, missing ones as 0, and, where asked, 1 for a sample that is there and 0 for one
     /// that is not.
     pub fn row<T: Real>(&self, band: usize, row: usize, values: &mut [T], mask: Option<&mut [T]>) {
@@ -181,6 +197,14 @@ fn has_missing<S: Sample>(stored: &[S], missing: &MissingCodes) -> bool {
         [code] => part.iter().fold(false, |any, v| any | v.is_nan() | v.is(*code)),
         more => part.iter().any(|v| v.is_nan() || more.iter().any(|c| v.is(*c))),
     })
+}
+
+fn row_has_missing<S: Sample>(stored: &[S], missing: &MissingCodes) -> bool {
+    let codes: Vec<S> = missing.of();
+    match codes.as_slice() {
+        [] => S::CAN_BE_NAN && stored.iter().fold(false, |any, v| any | v.is_nan()),
+        codes => stored.iter().any(|v| v.is_nan() || codes.iter().any(|c| v.is(*c))),
+    }
 }
 
 fn expand<S: Sample, T: Real>(

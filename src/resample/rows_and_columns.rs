@@ -59,10 +59,20 @@ pub fn resample<T: Real>(
 ) -> Array2<T> {
     let (height, width) = patch.size();
     let (out_height, out_width) = (rows.1.wanted.clone().count(), columns.1.wanted.clone().count());
+    // A mask is 1 nearly everywhere: lines without gaps all give what a line of ones gives.
+    let ones = (plane == Plane::Mask).then(|| (unit(part, columns), unit(part, rows)));
     let mut between = Array2::<T>::default((height, out_width));
     between.axis_chunks_iter_mut(NdAxis(0), LANES).into_par_iter().enumerate().for_each_init(
         || (RowScratch::<T>::new(width, out_width), Scratch::default()),
         |(row, scratch), (group, mut out)| {
+            if let Some((line, _)) = &ones
+                && (0..out.nrows()).all(|j| patch.is_whole_row(band, group * LANES + j))
+            {
+                out.rows_mut()
+                    .into_iter()
+                    .for_each(|mut r| r.iter_mut().zip(line).for_each(|(v, w)| *v = *w));
+                return;
+            }
             for j in 0..out.nrows() {
                 row.load(patch, band, group * LANES + j, j, plane);
             }
@@ -77,6 +87,17 @@ pub fn resample<T: Real>(
         || (Vec::new(), Vec::new(), Scratch::default()),
         |(strip, out_strip, scratch), (index, mut out)| {
             let (start, used) = (index * STRIP, out.ncols());
+            if let Some((across, down)) = &ones {
+                let across = &across[start..start + used];
+                let plain =
+                    |r: usize| between.row(r).as_slice().is_some_and(|l| &l[start..start + used] == across);
+                if (0..height).all(plain) {
+                    for (mut line, d) in out.rows_mut().into_iter().zip(down) {
+                        line.iter_mut().zip(across).for_each(|(v, a)| *v = *d * *a);
+                    }
+                    return;
+                }
+            }
             let lanes = used.next_multiple_of(LANES);
             strip.clear();
             strip.resize(height * lanes, T::default());
@@ -94,6 +115,14 @@ pub fn resample<T: Real>(
         },
     );
     result
+}
+
+/// What an axis makes of a line of ones.
+fn unit<T: Real>(part: Part, axis: (&Chain<T>, &Stretch<T>)) -> Vec<T> {
+    let samples = vec![T::ONE; axis.1.reach.samples.clone().count() * LANES];
+    let mut out = vec![T::default(); axis.1.wanted.clone().count() * LANES];
+    axis.0.apply(part, axis.1, &samples, LANES, &mut out, &mut Scratch::default());
+    out.chunks_exact(LANES).map(|lanes| lanes[0]).collect()
 }
 
 /// Sixteen rows side by side.
