@@ -325,8 +325,14 @@ impl Run<'_> {
             ringing: Ringing {
                 step_overshoot: if matches!(self.plan, Plan::Copy { .. }) {
                     Some(0.0)
-                } else {
+                } else if reduce_name(self.plan, rules.reduce) == "none" {
                     step_overshoot(kernel)
+                } else {
+                    super::windows::widened_overshoot(
+                        self.plan,
+                        rules,
+                        (self.from.grid.rows, self.from.grid.columns),
+                    )
                 },
             },
             noise: Noise {

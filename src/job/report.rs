@@ -76,7 +76,8 @@ pub fn reduced(path: &Path) -> Result<(Vec<f64>, usize, usize)> {
 fn of_run(job: &Job) -> Result<RunPictures> {
     let before = open_masked(&job.input, job.mask.as_deref(), job.rules.missing)?;
     let after = raster::open(&job.output)?;
-    let codes = (codes_of(before.header(), job.rules.missing), codes_of(after.header(), None));
+    // NPY and PNG cannot declare the code that was written.
+    let codes = (codes_of(before.header(), job.rules.missing), codes_of(after.header(), job.rules.missing));
     let area = if job.rules.values == Values::Total {
         let j = job.back.jacobian(0.0, 0.0);
         (j[0][0] * j[1][1] - j[0][1] * j[1][0]).abs()
@@ -92,6 +93,10 @@ fn of_run(job: &Job) -> Result<RunPictures> {
     all.nyquist = 0.5 / rows.pitch.max(columns.pitch).max(1.0);
     all.step = windows::step_response(&plan, &job.rules, size);
     all.phases = phases(&job.back, size, target, job.rules.outside);
+    if job.rules.values == Values::Label {
+        // Class codes have no difference.
+        all.difference.clear();
+    }
     if let Values::Cyclic(period) = job.rules.values {
         // Differences of angles go the short way round.
         all.difference.iter_mut().for_each(|d| *d = (*d + 0.5 * period).rem_euclid(period) - 0.5 * period);

@@ -122,6 +122,11 @@ fn upright(
     (axis(source.0, x, j[0], stretch.0), axis(source.1, y, j[1], stretch.1))
 }
 
+/// Overshoot of an edge as a fraction of its height, of a plan whose kernel was widened: the greatest response to an edge.
+pub fn widened_overshoot(plan: &Plan, rules: &Rules, source: (usize, usize)) -> Option<f64> {
+    step_response(plan, rules, source).into_iter().map(|s| s.1 - 1.0).reduce(f64::max).map(|o| o.max(0.0))
+}
+
 /// The response to an edge of unit height along rows: position in input pixels from the edge, and value. Empty for a copy and
 /// for kernels that look at whole lines.
 pub fn step_response(plan: &Plan, rules: &Rules, source: (usize, usize)) -> Vec<(f64, f64)> {

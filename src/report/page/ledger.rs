@@ -17,7 +17,7 @@ pub struct RunPictures {
     pub before: Vec<f64>,
     /// The output.
     pub after: Vec<f64>,
-    /// Output less input, the input looked at linearly.
+    /// Output less input, the input looked at linearly; empty where a difference means nothing.
     pub difference: Vec<f64>,
     /// How the pictures were reduced; may be empty.
     pub note: String,
@@ -74,6 +74,19 @@ fn run(ledger: &Ledger, p: &RunPictures) -> Result<String> {
     );
     out +=
         &section("Before and after", &flick(("Before", "After"), (&pictures.0, &pictures.1), &bar, &caption));
+    let difference = if p.difference.is_empty() { String::new() } else { difference(p)? };
+    out += &format!("<div class=\"pair\">\n{difference}{}</div>\n", closure(ledger));
+    out += &section("What the kernel does", &kernel(ledger, p));
+    let table = table(&serde_json::to_value(ledger).unwrap_or_default(), meaning);
+    out += &section(
+        "All numbers",
+        &format!("<details open><summary>The ledger, key by key</summary>\n{table}</details>\n"),
+    );
+    Ok(out)
+}
+
+/// The section that shows output less input.
+fn difference(p: &RunPictures) -> Result<String> {
     let about = Range::about_zero(&p.difference);
     let difference = picture(
         &p.difference,
@@ -85,17 +98,11 @@ fn run(ledger: &Ledger, p: &RunPictures) -> Result<String> {
     )?;
     let shown = format!(
         "<figure>{difference}{}<figcaption>Output less input, the input looked at by linear interpolation: rust where the output is \
-         lower, blue where it is higher. What stands here is detail that was lost or rung, and noise.</figcaption></figure>",
+         lower, blue where it is higher. What stands here is the kernel's doing and that of the linear look together; on a reduced \
+         picture also what its own sampling misses.</figcaption></figure>",
         scale(Palette::Diverging, about, "")
     );
-    out += &format!("<div class=\"pair\">\n{}{}</div>\n", section("Difference", &shown), closure(ledger));
-    out += &section("What the kernel does", &kernel(ledger, p));
-    let table = table(&serde_json::to_value(ledger).unwrap_or_default(), meaning);
-    out += &section(
-        "All numbers",
-        &format!("<details open><summary>The ledger, key by key</summary>\n{table}</details>\n"),
-    );
-    Ok(out)
+    Ok(section("Difference", &shown))
 }
 
 fn at_a_glance(l: &Ledger) -> Vec<Tile> {
