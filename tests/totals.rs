@@ -3,11 +3,11 @@
 
 mod common;
 
-use common::{Memory, values, worst};
+use common::{Memory, make, values, worst};
 use regauge::grid::Grid;
 use regauge::map::{Anchor, Frame, Map, Motion, Rescale, moved, polygon, rescaled};
-use regauge::raster::{MissingCodes, SampleType, Samples};
-use regauge::resample::{Engine, Outside, Plan, Rules, Shifted, Values};
+use regauge::raster::SampleType;
+use regauge::resample::{Outside, Plan, Rules, Shifted, Values};
 
 const KERNELS: [&str; 6] = ["linear", "keys", "bspline:3", "bspline:5", "lanczos:3", "area"];
 
@@ -15,7 +15,7 @@ fn rules(kernel: &str) -> Rules {
     Rules { kernel: kernel.parse().unwrap(), values: Values::Total, ..Rules::default() }
 }
 
-/// Runs totals in f64: the output and what happened beside it.
+/// Runs totals: the output and what happened beside it.
 fn run(
     source: &Memory,
     target: (usize, usize),
@@ -23,33 +23,8 @@ fn run(
     rules: &Rules,
     side: Option<usize>,
 ) -> (Vec<f64>, Shifted) {
-    let size = (source.header.grid.rows, source.header.grid.columns);
-    let engine = Engine {
-        source,
-        target,
-        plan: Plan::new(size, target, back, rules).unwrap(),
-        rules,
-        codes: MissingCodes::default(),
-        sample_type: SampleType::F64,
-        fill: None,
-        extras: Default::default(),
-    };
-    let mut out = vec![f64::NAN; target.0 * target.1];
-    let mut all = Shifted::default();
-    let outside = engine
-        .run(1, side, &mut |block| {
-            let Samples::F64(v) = &block.samples else { panic!("not f64") };
-            let w = &block.window;
-            for (i, r) in w.rows.clone().enumerate() {
-                out[r * target.1 + w.columns.start..r * target.1 + w.columns.end]
-                    .copy_from_slice(&v[i * w.columns.len()..(i + 1) * w.columns.len()]);
-            }
-            all.merge(&block.shifted);
-            Ok(())
-        })
-        .unwrap();
-    all.merge(&outside);
-    (out, all)
+    let made = make(source, target, back, rules, None, side);
+    (made.values, made.shifted)
 }
 
 /// Compensated sum of what is there.

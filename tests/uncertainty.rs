@@ -3,10 +3,10 @@
 
 mod common;
 
-use common::{Memory, values};
+use common::{Memory, make, values};
 use regauge::map::{Map, Motion};
 use regauge::raster::{Header, MissingCodes, Raster, SampleType, Samples};
-use regauge::resample::{Engine, Extras, Noise, Outside, Plan, Reduce, Rules, Values};
+use regauge::resample::{Noise, Outside, Reduce, Rules, Values};
 use std::sync::Arc;
 
 /// Values and sigma of one resampling.
@@ -18,33 +18,8 @@ fn run(
     noise: Option<&Noise>,
     side: usize,
 ) -> (Vec<f64>, Vec<f64>) {
-    let size = (source.header.grid.rows, source.header.grid.columns);
-    let engine = Engine {
-        source,
-        target,
-        plan: Plan::new(size, target, back, rules).unwrap(),
-        rules,
-        codes: MissingCodes::default(),
-        sample_type: SampleType::F64,
-        fill: None,
-        extras: Extras { noise: noise.cloned(), ..Extras::default() },
-    };
-    let (mut out, mut sigma) = (vec![f64::NAN; target.0 * target.1], vec![f64::NAN; target.0 * target.1]);
-    engine
-        .run(1, Some(side), &mut |block| {
-            let Samples::F64(v) = &block.samples else { panic!() };
-            let w = &block.window;
-            for (i, r) in w.rows.clone().enumerate() {
-                let at = r * target.1 + w.columns.start..r * target.1 + w.columns.end;
-                out[at.clone()].copy_from_slice(&v[i * w.columns.len()..(i + 1) * w.columns.len()]);
-                if let Some(s) = &block.sigma {
-                    sigma[at].copy_from_slice(&s[i * w.columns.len()..(i + 1) * w.columns.len()]);
-                }
-            }
-            Ok(())
-        })
-        .unwrap();
-    (out, sigma)
+    let made = make(source, target, back, rules, noise, Some(side));
+    (made.values, made.sigma)
 }
 
 /// sqrt(sum of squares of the operator's entries times variance), the operator taken impulse by impulse.

@@ -231,6 +231,25 @@ pub fn command_line() -> Vec<String> {
         .collect()
 }
 
+/// Runs the one job of a command from end to end: estimate or run, report, ledger.
+pub fn run_one(job: &Job, ledger: Option<PathBuf>, planes: &Planes, running: &Running) -> Result<Outcome> {
+    let conduct = Conduct {
+        command: command_line(),
+        ledger,
+        overwrite: running.overwrite,
+        sigma_out: planes.sigma_out.clone(),
+        coverage: planes.coverage.clone(),
+        fractions: planes.fractions.clone(),
+    };
+    if running.dry_run {
+        return tell_estimate(job, &conduct, running, false);
+    }
+    check_report(running, &[&job.input, &job.output, &job.ledger_path()])?;
+    let ledger = run_job(job, running, &conduct)?;
+    report(running, &[(job, &ledger)])?;
+    conclude(&[ledger], running)
+}
+
 /// Runs one job with a progress bar, notes and a summary.
 pub fn run_job(job: &Job, running: &Running, conduct: &Conduct) -> Result<Ledger> {
     let bar = Bar::new(&job.output.display().to_string(), running.quiet);

@@ -2,11 +2,11 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, about, check_report, command_line, conclude, report,
-    row_and_column, rules, run_job, say_notes, tell_estimate, warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, about, row_and_column, rules, run_one, say_notes,
+    warn_of_kernel,
 };
 use crate::error::{Error, Result};
-use crate::job::{Conduct, Job};
+use crate::job::Job;
 use crate::map::{Frame, Map, MapFile, Motion, moved};
 use crate::raster;
 use crate::resample::Plan;
@@ -96,19 +96,5 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     warn_of_kernel(&rules, back.as_axes().is_none(), a.running.quiet);
     let (sigma, mask) = a.planes.of(0, 1)?;
     let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules, sigma, mask };
-    let conduct = Conduct {
-        command: command_line(),
-        ledger: a.ledger.clone(),
-        overwrite: a.running.overwrite,
-        sigma_out: a.planes.sigma_out.clone(),
-        coverage: a.planes.coverage.clone(),
-        fractions: a.planes.fractions.clone(),
-    };
-    if a.running.dry_run {
-        return tell_estimate(&job, &conduct, &a.running, false);
-    }
-    check_report(&a.running, &[&job.input, &job.output, &job.ledger_path()])?;
-    let ledger = run_job(&job, &a.running, &conduct)?;
-    report(&a.running, &[(&job, &ledger)])?;
-    conclude(&[ledger], &a.running)
+    run_one(&job, a.ledger.clone(), &a.planes, &a.running)
 }

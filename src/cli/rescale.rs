@@ -2,11 +2,10 @@
 
 use super::Outcome;
 use super::common::{
-    Planes, Resampling, Running, about, check_report, command_line, conclude, pair, report, rules, run_job,
-    say_notes, size, tell_estimate, warn_of_kernel,
+    Planes, Resampling, Running, about, pair, rules, run_one, say_notes, size, warn_of_kernel,
 };
 use crate::error::Result;
-use crate::job::{Conduct, Job};
+use crate::job::Job;
 use crate::map::{Anchor, Rescale, rescaled};
 use crate::raster;
 use crate::resample::Outside;
@@ -70,19 +69,5 @@ pub fn run(a: &Arguments) -> Result<Outcome> {
     let (target, back) = rescaled(&header.grid, how, anchor).map_err(|e| about(&a.input, e))?;
     let (sigma, mask) = a.planes.of(0, 1)?;
     let job = Job { input: a.input.clone(), output: a.output.clone(), target, back, rules, sigma, mask };
-    let conduct = Conduct {
-        command: command_line(),
-        ledger: a.ledger.clone(),
-        overwrite: a.running.overwrite,
-        sigma_out: a.planes.sigma_out.clone(),
-        coverage: a.planes.coverage.clone(),
-        fractions: a.planes.fractions.clone(),
-    };
-    if a.running.dry_run {
-        return tell_estimate(&job, &conduct, &a.running, false);
-    }
-    check_report(&a.running, &[&job.input, &job.output, &job.ledger_path()])?;
-    let ledger = run_job(&job, &a.running, &conduct)?;
-    report(&a.running, &[(&job, &ledger)])?;
-    conclude(&[ledger], &a.running)
+    run_one(&job, a.ledger.clone(), &a.planes, &a.running)
 }

@@ -9,7 +9,7 @@ use crate::error::Result;
 use crate::map::{Map, polygon};
 use crate::measure::Local;
 use crate::raster::{MissingCodes, Source, Window};
-use crate::resample::{Cells, corners};
+use crate::resample::{Cells, Squares, corners};
 use crate::with_samples;
 use rayon::prelude::*;
 use std::ops::Range;
@@ -23,6 +23,9 @@ struct Part {
     /// Its value times the area over missing input.
     after: f64,
 }
+
+/// Output pixels of a row that are looked at together.
+const TILE: usize = 16;
 
 /// Samples of the input that are looked at at a time.
 const AT_A_TIME: usize = 1 << 22;
@@ -81,19 +84,20 @@ fn take_back_rows(
         let stored = source.read(band..band + 1, &under)?;
         let mut samples = vec![0.0; under.area()];
         with_samples!(&stored, v => as_f64(v, codes, &mut samples));
-        let gaps = samples.iter().any(|v| v.is_nan());
-        if !gaps && !out.iter().any(|v| v.is_nan()) {
-            continue;
-        }
+        let there = Squares::of((under.rows.len(), under.columns.len()), &samples, |v| !v.is_nan());
         let parts: Vec<Vec<Part>> = out
             .par_chunks(width)
             .zip(window.rows.clone())
             .map_init(Cells::default, |cells, (line, row)| {
                 let mut found = Vec::new();
-                for (v, column) in line.iter().zip(window.columns.clone()) {
-                    if !gaps && !v.is_nan() {
-                        continue;
-                    }
+                // What a tile of pixels lies over tells for all of them, mostly.
+                let tiles = line.chunks(TILE).zip(window.columns.clone().step_by(TILE));
+                let pixels = tiles.flat_map(|(values, start)| {
+                    let over_gaps = sees_gap(&there, back, &under, row, start..start + values.len());
+                    let counts = move |v: &f64| over_gaps || v.is_nan();
+                    values.iter().zip(start..).filter(move |(v, _)| counts(v))
+                });
+                for (v, column) in pixels {
                     let image = corners(back, row as f64, column as f64);
                     // A total counts with the share of its pixel, a density with the area.
                     let whole = if total { polygon::area(&image) } else { 1.0 };
@@ -128,4 +132,18 @@ fn take_back_rows(
         }
     }
     Ok(())
+}
+
+/// Whether some of a row's pixels may lie over a missing sample.
+fn sees_gap(there: &Squares, back: &Map, under: &Window, row: usize, columns: Range<usize>) -> bool {
+    let rows = (row as f64 - 0.5, row as f64 + 0.5);
+    let columns = (columns.start as f64 - 0.5, columns.end as f64 - 0.5);
+    if !back.is_regular(rows, columns) {
+        return true;
+    }
+    let b = back.bounds(rows, columns);
+    let among = |(low, high): (f64, f64), start: usize| {
+        ((low.floor() as i64).saturating_sub(start as i64), (high.ceil() as i64).saturating_sub(start as i64))
+    };
+    !there.holds_within(among(b.rows, under.rows.start), among(b.columns, under.columns.start))
 }

@@ -206,6 +206,14 @@ impl Map {
         }
     }
 
+    /// Whether nothing between these outer positions is sent to infinity.
+    pub fn is_regular(&self, rows: (f64, f64), columns: (f64, f64)) -> bool {
+        let [a, b, c] = self.matrix[2];
+        let corners = [(rows.0, columns.0), (rows.0, columns.1), (rows.1, columns.0), (rows.1, columns.1)];
+        let mut divisors = corners.iter().map(|(row, column)| a * row + b * column + c);
+        divisors.clone().all(|d| d > 0.0) || divisors.all(|d| d < 0.0)
+    }
+
     /// The box (rows low, rows high, columns low, columns high) that the frame with outer edges
     /// `rows.0..rows.1`, `columns.0..columns.1` maps into.
     pub fn bounds(&self, rows: (f64, f64), columns: (f64, f64)) -> Bounds {

@@ -27,6 +27,7 @@ pub struct Chain<T> {
 }
 
 /// The weights for a range of outputs, with what they need.
+#[derive(Clone)]
 pub struct Stretch<T> {
     /// The outputs wanted.
     pub wanted: Range<i64>,
@@ -40,6 +41,14 @@ impl<T: Real> Stretch<T> {
     pub fn of_weights(wanted: Range<i64>, reach: Range<i64>, banded: Banded<T>) -> Self {
         let reach = Reach { outputs: wanted.clone(), taps: reach.clone(), samples: reach };
         Stretch { wanted, reach, banded }
+    }
+
+    /// Where a piece's samples lie among those of the whole, and its outputs among the whole's.
+    pub fn places(&self, whole: &Stretch<T>) -> (Range<usize>, Range<usize>) {
+        let among = |own: &Range<i64>, all: &Range<i64>| {
+            (own.start - all.start) as usize..(own.end - all.start) as usize
+        };
+        (among(&self.reach.samples, &whole.reach.samples), among(&self.wanted, &whole.wanted))
     }
 }
 
@@ -84,6 +93,30 @@ impl<T: Real> Chain<T> {
         let banded =
             Banded::build(&self.axis, &self.weigher, if unweighted { 0..0 } else { reach.outputs.clone() });
         Stretch { wanted, reach, banded }
+    }
+
+    /// Cuts a stretch into pieces whose samples lie close together, as far as `part` of the chain allows: each gives the
+    /// same numbers as the whole.
+    pub fn pieces(&self, part: Part, stretch: &Stretch<T>) -> Vec<Stretch<T>> {
+        const PIECE: usize = 64;
+        let wanted = stretch.wanted.clone();
+        let cuts = part == Part::Weights || !self.is_filtered();
+        if self.fourier.is_some() || self.axis.way == Way::Coefficients || !cuts {
+            return vec![stretch.clone()];
+        }
+        let of = |start: i64| {
+            let wanted = start..(start + PIECE as i64).min(stretch.wanted.end);
+            let rows = (wanted.start - stretch.reach.outputs.start) as usize..;
+            let banded = stretch.banded.part(rows.start..rows.start + wanted.clone().count());
+            let first = stretch.reach.taps.start;
+            let taps = banded.reach().unwrap_or(first..first);
+            Stretch {
+                reach: Reach { outputs: wanted.clone(), taps: taps.clone(), samples: taps },
+                wanted,
+                banded,
+            }
+        };
+        wanted.step_by(PIECE).map(of).collect()
     }
 
     /// Whether the whole chain differs from its weights alone.

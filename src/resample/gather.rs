@@ -3,12 +3,17 @@
 use super::axis::is_inside;
 use super::passes::Span;
 use super::rules::Outside;
+use super::squares::Squares;
 use super::weights::Weigher;
 use crate::map::Map;
 use crate::real::Real;
 use crate::simd;
-use ndarray::Array2;
 use ndarray::parallel::prelude::*;
+use ndarray::{Array2, ArrayViewMut2, s};
+use std::ops::Range;
+
+/// Side of the squares of outputs whose mask is told at one look.
+const TILE: usize = 16;
 
 /// How a gather looks at each position.
 #[derive(Clone, Debug)]
@@ -46,6 +51,35 @@ impl Look {
         }
         Some(if self.lattice == Map::IDENTITY { (x, y) } else { self.lattice.apply(x, y) })
     }
+
+    /// Whether all output pixels of a tile look inside, and only where a mask's plane is 1.
+    fn sees_only(
+        &self,
+        plain: &Squares,
+        origin: (i64, i64),
+        rows: &Range<i64>,
+        columns: &Range<i64>,
+    ) -> bool {
+        let ends = |r: &Range<i64>| (r.start as f64, r.end as f64 - 1.0);
+        if !self.back.is_regular(ends(rows), ends(columns)) {
+            return false;
+        }
+        let seen = self.back.bounds(ends(rows), ends(columns));
+        let inside = |b: (f64, f64), n: usize| is_inside(b.0, n) && is_inside(b.1, n);
+        if self.outside == Outside::Missing
+            && !(inside(seen.rows, self.source.0) && inside(seen.columns, self.source.1))
+        {
+            return false;
+        }
+        let nodes = self.lattice.bounds(seen.rows, seen.columns);
+        let around = |b: (f64, f64), radius: f64, origin: i64| {
+            ((b.0 - radius).floor() as i64 - origin, (b.1 + radius).ceil() as i64 - origin)
+        };
+        plain.holds(
+            around(nodes.rows, self.weighers.0.radius(), origin.0),
+            around(nodes.columns, self.weighers.1.radius(), origin.1),
+        )
+    }
 }
 
 /// A plane of samples or coefficients over extended indices.
@@ -56,36 +90,10 @@ pub struct Nodes<'a, T> {
     pub origin: (i64, i64),
 }
 
-/// Where a mask's plane is 1, in squares of [`Plain::SIDE`].
-pub struct Plain {
-    flags: Array2<bool>,
-    size: (usize, usize),
-}
-
-impl Plain {
-    const SIDE: usize = 16;
-
-    /// Looks at a plane.
-    pub fn of<T: Real>(values: &Array2<T>) -> Self {
-        let size = values.dim();
-        let mut flags = Array2::from_elem((size.0.div_ceil(Self::SIDE), size.1.div_ceil(Self::SIDE)), true);
-        for ((r, c), v) in values.indexed_iter() {
-            if (v.to_f64() - 1.0).abs() > 0.1 * T::UNITY_SLACK {
-                flags[(r / Self::SIDE, c / Self::SIDE)] = false;
-            }
-        }
-        Plain { flags, size }
-    }
-
-    /// Whether all is 1 from the first to the last row and column; what lies beyond the plane is not known to be.
-    fn holds(&self, rows: (i64, i64), columns: (i64, i64)) -> bool {
-        let inside = |r: (i64, i64), n: usize| r.0 >= 0 && r.1 < n as i64;
-        if !(inside(rows, self.size.0) && inside(columns, self.size.1)) {
-            return false;
-        }
-        let squares = |r: (i64, i64)| r.0 as usize / Self::SIDE..=r.1 as usize / Self::SIDE;
-        squares(rows).all(|i| squares(columns).all(|k| self.flags[(i, k)]))
-    }
+/// Where a mask's plane is 1.
+pub fn squares_of_ones<T: Real>(plane: &Array2<T>) -> Squares {
+    let one = |v: &T| (v.to_f64() - 1.0).abs() <= 0.1 * T::UNITY_SLACK;
+    Squares::of(plane.dim(), plane.as_standard_layout().as_slice().unwrap_or_default(), one)
 }
 
 /// How the gather weighs: by the weights themselves or by their moduli.
@@ -115,19 +123,30 @@ pub(super) fn gather<T: Real>(
     plane: &Nodes<T>,
     by: By,
     span: &Span,
-    plain: Option<&Plain>,
+    plain: Option<&Squares>,
 ) -> Array2<T> {
     let mut out = Array2::<T>::from_elem(span.size(), T::from_f64(f64::NAN));
-    out.axis_chunks_iter_mut(ndarray::Axis(0), 4).into_par_iter().enumerate().for_each_init(
+    let tiles = (0..out.ncols()).step_by(TILE).map(|c| c..(c + TILE).min(out.ncols()));
+    let tiles: Vec<Range<usize>> = tiles.collect();
+    let height = if plain.is_some() { TILE } else { 4 };
+    out.axis_chunks_iter_mut(ndarray::Axis(0), height).into_par_iter().enumerate().for_each_init(
         || Local::new(look),
         |local, (group, mut lines)| {
-            for (j, mut line) in lines.rows_mut().into_iter().enumerate() {
-                let r = (span.rows.start + (4 * group + j) as i64) as f64;
-                for (v, c) in line.iter_mut().zip(span.columns.clone()) {
-                    if !local.is_plain(look, plane, plain, r, c as f64, v) {
-                        local.pixel(look, plane, by, r, c as f64, v);
+            let top = span.rows.start + (height * group) as i64;
+            let rows = top..top + lines.nrows() as i64;
+            if let Some(plain) = plain {
+                for tile in &tiles {
+                    let left = span.columns.start + tile.start as i64;
+                    let columns = left..left + tile.len() as i64;
+                    let mut out = lines.slice_mut(s![.., tile.clone()]);
+                    if look.sees_only(plain, plane.origin, &rows, &columns) {
+                        out.fill(T::ONE);
+                    } else {
+                        local.block(look, plane, by, (&rows, &columns), &mut out);
                     }
                 }
+            } else {
+                local.block(look, plane, by, (&rows, &span.columns), &mut lines.view_mut());
             }
         },
     );
@@ -152,28 +171,19 @@ impl<T: Real> Local<T> {
         }
     }
 
-    /// Sets a pixel of a mask to 1 where all that it looks at is 1.
-    fn is_plain(
+    fn block(
         &mut self,
         look: &Look,
         plane: &Nodes<T>,
-        plain: Option<&Plain>,
-        row: f64,
-        column: f64,
-        out: &mut T,
-    ) -> bool {
-        let Some(plain) = plain else { return false };
-        let Some((x, y)) = look.position(row, column, &mut self.weighers) else { return true };
-        let around = |x: f64, radius: f64, origin: i64| {
-            ((x - radius).floor() as i64 - origin, (x + radius).ceil() as i64 - origin)
-        };
-        let rows = around(x, self.weighers.0.radius(), plane.origin.0);
-        let columns = around(y, self.weighers.1.radius(), plane.origin.1);
-        let is = plain.holds(rows, columns);
-        if is {
-            *out = T::ONE;
+        by: By,
+        span: (&Range<i64>, &Range<i64>),
+        out: &mut ArrayViewMut2<T>,
+    ) {
+        for (mut line, r) in out.rows_mut().into_iter().zip(span.0.clone()) {
+            for (v, c) in line.iter_mut().zip(span.1.clone()) {
+                self.pixel(look, plane, by, r as f64, c as f64, v);
+            }
         }
-        is
     }
 
     fn pixel(&mut self, look: &Look, plane: &Nodes<T>, by: By, row: f64, column: f64, out: &mut T) {

@@ -20,6 +20,7 @@ mod rows_and_columns;
 mod rules;
 mod settle;
 mod shear;
+mod squares;
 mod values;
 mod variance;
 pub mod weights;
@@ -36,5 +37,6 @@ pub fn gram_symbol(kernel: &crate::kernel::Kernel) -> Vec<f64> {
 }
 pub use rules::{Outside, Reduce, Rules};
 pub use settle::Shifted;
+pub use squares::Squares;
 pub use values::{Limit, Values};
 pub use variance::Noise;

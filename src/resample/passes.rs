@@ -3,7 +3,7 @@
 use super::axis::{Axis, Way, is_inside};
 use super::blocks::Engine;
 use super::chain::{Chain, Part, Stretch};
-use super::gather::{By, Look, Nodes, Plain, gather};
+use super::gather::{By, Look, Nodes, gather, squares_of_ones};
 use super::majority::majority;
 use super::overlap::{Give, overlap};
 use super::patch::Patch;
@@ -12,6 +12,7 @@ use super::rows_and_columns::{Plane, resample};
 use super::rules::Outside;
 use super::settle::{Mask, Resampled};
 use super::shear::Shears;
+use super::squares::Squares;
 use super::values::Values;
 use super::variance::{self, Noise, Variance};
 use super::weights::Weigher;
@@ -346,11 +347,11 @@ impl<T: Real> Prepared<'_, T> {
             Passes::Gather { rows, columns, look, .. } => {
                 let Some(axes) = self.axes_of(rows, columns) else { return empty() };
                 let whole = self.plane(&axes, band, Plane::Mask, Part::Whole);
-                let plain = Plain::of(&whole);
+                let plain = squares_of_ones(&whole);
                 let whole = self.look_at(look, &whole, By::Weights, Some(&plain));
                 let raw = self.plane(&axes, band, Plane::Mask, Part::Weights);
                 let filtered = rows.is_filtered() || columns.is_filtered();
-                let plain = Plain::of(&raw);
+                let plain = squares_of_ones(&raw);
                 let taps = filtered.then(|| self.look_at(look, &raw, By::Weights, Some(&plain)));
                 Mask { whole, taps, moduli: Some(self.look_at(look, &raw, By::Moduli, Some(&plain))) }
             }
@@ -395,7 +396,7 @@ impl<T: Real> Prepared<'_, T> {
         out.mapv(T::from_f64)
     }
 
-    fn look_at(&self, look: &Look, values: &Array2<T>, by: By, plain: Option<&Plain>) -> Array2<T> {
+    fn look_at(&self, look: &Look, values: &Array2<T>, by: By, plain: Option<&Squares>) -> Array2<T> {
         gather(look, &Nodes { values, origin: self.origin }, by, &self.span, plain)
     }
 

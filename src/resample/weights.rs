@@ -289,6 +289,16 @@ impl<T: Real> Banded<T> {
             .reduce(|a, b| a.start.min(b.start)..a.end.max(b.end))
     }
 
+    /// The weights of some of the outputs.
+    pub fn part(&self, outputs: Range<usize>) -> Self {
+        let at = &self.at[outputs.start..=outputs.end];
+        Banded {
+            start: self.start[outputs].to_vec(),
+            at: at.iter().map(|a| a - at[0]).collect(),
+            weights: self.weights[at[0]..at[at.len() - 1]].to_vec(),
+        }
+    }
+
     /// First sample and weights of output `i` of the range.
     #[inline(always)]
     pub fn row(&self, i: usize) -> (i64, &[T]) {

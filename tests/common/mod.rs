@@ -4,7 +4,7 @@
 use regauge::grid::Grid;
 use regauge::map::Map;
 use regauge::raster::{Header, MissingCodes, Sample, SampleType, Samples, Source, Storage, Window};
-use regauge::resample::{Engine, Plan, Rules};
+use regauge::resample::{Engine, Extras, Noise, Plan, Rules, Shifted};
 use std::ops::Range;
 
 pub struct Memory {
@@ -47,6 +47,15 @@ impl Source for Memory {
     }
 }
 
+/// What a run of the engine gives.
+pub struct Made {
+    pub values: Vec<f64>,
+    /// NaN where no noise was given.
+    pub sigma: Vec<f64>,
+    /// What totals did at gaps and beyond the frame.
+    pub shifted: Shifted,
+}
+
 /// Runs the engine in memory; samples as f64.
 pub fn run(
     source: &Memory,
@@ -55,27 +64,45 @@ pub fn run(
     rules: &Rules,
     side: Option<usize>,
 ) -> Vec<f64> {
+    make(source, target, back, rules, None, side).values
+}
+
+/// The same with all that comes beside the samples.
+pub fn make(
+    source: &Memory,
+    target: (usize, usize),
+    back: &Map,
+    rules: &Rules,
+    noise: Option<&Noise>,
+    side: Option<usize>,
+) -> Made {
     let size = (source.header.grid.rows, source.header.grid.columns);
     let plan = Plan::new(size, target, back, rules).unwrap();
     let sample_type = rules.sample_type.unwrap_or(source.header.sample_type);
     let codes = MissingCodes { codes: rules.missing.into_iter().collect() };
-    let engine =
-        Engine { source, target, plan, rules, codes, sample_type, fill: None, extras: Default::default() };
-    let mut out = vec![f64::NAN; target.0 * target.1];
-    engine
+    let extras = Extras { noise: noise.cloned(), ..Extras::default() };
+    let engine = Engine { source, target, plan, rules, codes, sample_type, fill: None, extras };
+    let empty = vec![f64::NAN; target.0 * target.1];
+    let mut made = Made { values: empty.clone(), sigma: empty, shifted: Shifted::default() };
+    let outside = engine
         .run(1, side, &mut |block| {
             let values: Vec<f64> =
                 regauge::with_samples!(&block.samples, v => v.iter().map(|v| v.wide()).collect());
-            let w = &block.window;
-            for (i, r) in w.rows.clone().enumerate() {
-                for (j, c) in w.columns.clone().enumerate() {
-                    out[r * target.1 + c] = values[i * w.columns.len() + j];
+            let width = block.window.columns.len();
+            for (i, r) in block.window.rows.clone().enumerate() {
+                let to = r * target.1 + block.window.columns.start..r * target.1 + block.window.columns.end;
+                let from = i * width..(i + 1) * width;
+                made.values[to.clone()].copy_from_slice(&values[from.clone()]);
+                if let Some(sigma) = &block.sigma {
+                    made.sigma[to].copy_from_slice(&sigma[from]);
                 }
             }
+            made.shifted.merge(&block.shifted);
             Ok(())
         })
         .unwrap();
-    out
+    made.shifted.merge(&outside);
+    made
 }
 
 /// Uneven values without symmetry, from a fixed seed.
