@@ -365,8 +365,8 @@ impl Ready<'_> {
         let out_codes = MissingCodes { codes: self.fill.into_iter().collect() };
         let (mut counts, mut near_gap, mut done) = (Counts::default(), 0, from.grid.pixels() as u64);
         let mut shifted = Shifted::default();
-        let total = done + self.header.grid.pixels() as u64;
-        let outside = engine.run(alignment, side, &mut |block| {
+        let total = done + self.header.grid.pixels() as u64 + engine.cells_beyond();
+        engine.run(alignment, side, &mut |block| {
             if progress.stopped() {
                 return Err(Error::Stopped);
             }
@@ -394,7 +394,11 @@ impl Ready<'_> {
             progress.advance(done, total);
             Ok(())
         })?;
-        shifted.merge(&outside);
+        shifted.merge(&engine.beyond(alignment, side, &mut |cells| {
+            done += cells;
+            progress.advance(done, total);
+            if progress.stopped() { Err(Error::Stopped) } else { Ok(()) }
+        })?);
         if progress.stopped() {
             return Err(Error::Stopped);
         }

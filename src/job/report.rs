@@ -6,13 +6,18 @@ use crate::error::Result;
 use crate::map::Map;
 use crate::measure::transfer_curve;
 use crate::raster::{self, MissingCodes, Source, Window, codes_of};
-use crate::report::{Audit, Display, Ledger, RunPictures, audit_page, ledger_page, write_whole};
+use crate::report::{
+    Audit, BandPictures, Display, Ledger, RunPictures, audit_page, ledger_page, write_whole,
+};
 use crate::resample::{Outside, Plan, Values};
 use crate::with_samples;
 use std::path::Path;
 
 /// The longest side of a picture.
 const SIDE: usize = 640;
+
+/// Bands that a page shows.
+const BANDS: usize = 4;
 
 /// Places looked at in each cell of a picture, along an axis.
 const PLACES: usize = 3;
@@ -52,6 +57,7 @@ pub fn write_audit_report(
         &audit.relation.back,
         area,
         audit.band - 1,
+        audit.values == "label",
     )?;
     write(path, &audit_page(audit, &pictures)?)
 }
@@ -70,7 +76,7 @@ pub fn reduced(path: &Path) -> Result<(Vec<f64>, usize, usize)> {
     let grid = &source.header().grid;
     let display = Display::fit(grid.rows, grid.columns, grid.pixel_size(), SIDE);
     let columns = display.shown(grid.rows, grid.columns).1;
-    Ok((means(source.as_ref(), &codes, 0, &display)?, columns, display.repeat.0))
+    Ok((reduce(source.as_ref(), &codes, 0, &display, false)?, columns, display.repeat.0))
 }
 
 fn of_run(job: &Job) -> Result<RunPictures> {
@@ -84,24 +90,38 @@ fn of_run(job: &Job) -> Result<RunPictures> {
     } else {
         1.0
     };
-    let mut all = pictures((before.as_ref(), &codes.0), (after.as_ref(), &codes.1), &job.back, area, 0)?;
+    let classes = job.rules.values == Values::Label;
+    let count = after.header().bands;
+    let mut bands = Vec::new();
+    for band in 0..count.min(BANDS) {
+        let (before, after) = ((before.as_ref(), &codes.0), (after.as_ref(), &codes.1));
+        let mut shown = pictures(before, after, &job.back, area, band, classes)?;
+        if count > 1 {
+            let named = after.0.header().band_names.get(band).filter(|n| !n.is_empty());
+            shown.name = named.cloned().unwrap_or_else(|| format!("band {}", band + 1));
+        }
+        if let Values::Cyclic(period) = job.rules.values {
+            // Differences of angles go the short way round.
+            shown
+                .difference
+                .iter_mut()
+                .for_each(|d| *d = (*d + 0.5 * period).rem_euclid(period) - 0.5 * period);
+        }
+        bands.push(shown);
+    }
     let size = (before.header().grid.rows, before.header().grid.columns);
     let target = (job.target.rows, job.target.columns);
     let plan = Plan::new(size, target, &job.back, &job.rules)?;
     let (rows, columns, pixels) = costs::operators(&plan, &job.rules, size, target, &job.back);
-    all.transfer = transfer_curve(&rows, &columns, &pixels, 100);
-    all.nyquist = 0.5 / rows.pitch.max(columns.pitch).max(1.0);
-    all.step = windows::step_response(&plan, &job.rules, size);
-    all.phases = phases(&job.back, size, target, job.rules.outside);
-    if job.rules.values == Values::Label {
-        // Class codes have no difference.
-        all.difference.clear();
-    }
-    if let Values::Cyclic(period) = job.rules.values {
-        // Differences of angles go the short way round.
-        all.difference.iter_mut().for_each(|d| *d = (*d + 0.5 * period).rem_euclid(period) - 0.5 * period);
-    }
-    Ok(all)
+    Ok(RunPictures {
+        bands,
+        hidden: count.saturating_sub(BANDS),
+        classes,
+        transfer: transfer_curve(&rows, &columns, &pixels, 100),
+        nyquist: 0.5 / rows.pitch.max(columns.pitch).max(1.0),
+        step: windows::step_response(&plan, &job.rules, size),
+        phases: phases(&job.back, size, target, job.rules.outside),
+    })
 }
 
 /// Both rasters on the second one's grid, reduced to a picture; `back` goes from its positions to the first one's.
@@ -111,37 +131,49 @@ fn pictures(
     back: &Map,
     area: f64,
     band: usize,
-) -> Result<RunPictures> {
+    classes: bool,
+) -> Result<BandPictures> {
     let grid = &after.0.header().grid;
     let display = Display::fit(grid.rows, grid.columns, (1.0, 1.0), SIDE);
     let (_, columns) = display.shown(grid.rows, grid.columns);
-    let shown = means(after.0, after.1, band.min(after.0.header().bands - 1), &display)?;
+    let shown = reduce(after.0, after.1, band.min(after.0.header().bands - 1), &display, classes)?;
     // Small rasters are drawn with several picture pixels to a pixel: the input is looked at as finely.
     let fine = display.repeat.0.min(4);
-    let (nearest, linear) = looked_at(before, back, (grid.rows, grid.columns), &display, fine, area, band)?;
+    let places = if display.block == (1, 1) || classes { 1 } else { PLACES };
+    let (nearest, linear) =
+        looked_at(before, back, (grid.rows, grid.columns), &display, (fine, places), area, band)?;
     let (wide, repeat) = (columns * fine, (display.repeat.0 / fine).max(1));
     let enlarged = |v: &[f64]| -> Vec<f64> {
         let rows = v.len() / columns.max(1) * fine;
         (0..rows * wide).map(|i| v[(i / wide / fine) * columns + (i % wide) / fine]).collect()
     };
     let after = enlarged(&shown);
-    let difference = after.iter().zip(&linear).map(|(a, b)| a - b).collect();
-    Ok(RunPictures {
+    // Class codes have no difference.
+    let difference =
+        if classes { Vec::new() } else { after.iter().zip(&linear).map(|(a, b)| a - b).collect() };
+    Ok(BandPictures {
+        name: String::new(),
         columns: wide,
         repeat,
         before: nearest,
         after,
         difference,
-        note: display.note().map(|n| n[..1].to_uppercase() + &n[1..]).unwrap_or_default(),
-        transfer: Vec::new(),
-        nyquist: 0.5,
-        step: Vec::new(),
-        phases: [Vec::new(), Vec::new()],
+        note: if classes && display.block != (1, 1) {
+            format!("Of each {} × {} pixels the middle one is drawn", display.block.0, display.block.1)
+        } else {
+            display.note().map(|n| n[..1].to_uppercase() + &n[1..]).unwrap_or_default()
+        },
     })
 }
 
-/// Means of blocks of one band, read by bands of rows.
-fn means(source: &dyn Source, codes: &MissingCodes, band: usize, display: &Display) -> Result<Vec<f64>> {
+/// Means of blocks of one band, of class codes the middle ones, read by bands of rows.
+fn reduce(
+    source: &dyn Source,
+    codes: &MissingCodes,
+    band: usize,
+    display: &Display,
+    classes: bool,
+) -> Result<Vec<f64>> {
     let grid = &source.header().grid;
     let mut out = Vec::new();
     // Some million samples at a time, in whole blocks.
@@ -150,7 +182,12 @@ fn means(source: &dyn Source, codes: &MissingCodes, band: usize, display: &Displ
         let end = (start + rows).min(grid.rows);
         let window = Window { rows: start..end, columns: 0..grid.columns };
         let values = one_band(source, codes, band, &window)?;
-        out.extend(display.reduce(&values, end - start, grid.columns));
+        let (rows, columns) = (end - start, grid.columns);
+        out.extend(if classes {
+            display.pick(&values, rows, columns)
+        } else {
+            display.reduce(&values, rows, columns)
+        });
     }
     Ok(out)
 }
@@ -168,7 +205,7 @@ fn looked_at(
     back: &Map,
     target: (usize, usize),
     display: &Display,
-    fine: usize,
+    (fine, places): (usize, usize),
     area: f64,
     band: usize,
 ) -> Result<(Vec<f64>, Vec<f64>)> {
@@ -176,7 +213,6 @@ fn looked_at(
     let (rows, columns) = (shown.0 * fine, shown.1 * fine);
     let (n, m) = (source.0.header().grid.rows, source.0.header().grid.columns);
     let step = (display.block.0 as f64 / fine as f64, display.block.1 as f64 / fine as f64);
-    let places = if display.block == (1, 1) { 1 } else { PLACES };
     let (mut nearest, mut linear) = (vec![f64::NAN; rows * columns], vec![f64::NAN; rows * columns]);
     const TILE: usize = 64;
     for r0 in (0..rows).step_by(TILE) {
@@ -260,11 +296,10 @@ fn phases(back: &Map, source: (usize, usize), target: (usize, usize), outside: O
     const BINS: usize = 20;
     let mut bins = [vec![0.0; BINS], vec![0.0; BINS]];
     let mut count = 0.0;
-    // A lattice of whole pixels, dense enough for any pattern that a page can show.
-    let step = |n: usize| (n / 96).max(1);
-    for r in (0..target.0).step_by(step(target.0)) {
-        for c in (0..target.1).step_by(step(target.1)) {
-            let (x, y) = back.apply(r as f64, c as f64);
+    let places = (spread(target.0), spread(target.1));
+    for r in &places.0 {
+        for c in &places.1 {
+            let (x, y) = back.apply(*r as f64, *c as f64);
             let inside = |x: f64, n: usize| x >= -0.5 && x <= n as f64 - 0.5;
             if outside == Outside::Missing && !(inside(x, source.0) && inside(y, source.1)) {
                 continue;
@@ -278,4 +313,13 @@ fn phases(back: &Map, source: (usize, usize), target: (usize, usize), outside: O
         }
     }
     bins.map(|b| b.iter().map(|v| v / f64::max(count, 1.0)).collect())
+}
+
+/// Some of `n` places, spread by the golden ratio: no even stride, which could beat with a pattern of phases.
+fn spread(n: usize) -> Vec<usize> {
+    const MOST: usize = 144;
+    if n <= MOST {
+        return (0..n).collect();
+    }
+    (0..MOST).map(|i| ((i as f64 * 0.618_033_988_749_895).fract() * n as f64) as usize).collect()
 }

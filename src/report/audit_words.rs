@@ -87,8 +87,11 @@ impl Audit {
             (Some(v), Some(field)) => {
                 let d = field.at_centre;
                 let mut line = format!(
-                    "displacement: {:+.3}, {:+.3} +- {:.3} px of BEFORE in the middle (rows, columns; + = down, right): {}",
-                    d[0], d[1], field.sigma, v.words
+                    "displacement: {}, {} +- {:.3} px of BEFORE in the middle (rows, columns; + = down, right): {}",
+                    signed(d[0]),
+                    signed(d[1]),
+                    field.sigma,
+                    v.words
                 );
                 if let Some(largest) = f.largest.filter(|_| v.kind != Kind::None && v.kind != Kind::Constant)
                 {
@@ -224,4 +227,9 @@ impl Audit {
         }
         lines
     }
+}
+
+/// A displacement with its sign, but none where there is nothing.
+pub(super) fn signed(v: f64) -> String {
+    if v.abs() < 5e-4 { "0".into() } else { format!("{v:+.3}") }
 }

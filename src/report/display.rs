@@ -73,6 +73,16 @@ impl Display {
         out
     }
 
+    /// The value in the middle of each block: for class codes, whose means are nothing.
+    pub fn pick(&self, values: &[f64], rows: usize, columns: usize) -> Vec<f64> {
+        let (out_rows, out_columns) = self.shown(rows, columns);
+        let middle = |i: usize, block: usize, n: usize| (i * block + block / 2).min(n - 1);
+        let at = |r: usize, c: usize| {
+            values[middle(r, self.block.0, rows) * columns + middle(c, self.block.1, columns)]
+        };
+        (0..out_rows).flat_map(|r| (0..out_columns).map(move |c| (r, c))).map(|(r, c)| at(r, c)).collect()
+    }
+
     /// What a caption should say of it.
     pub fn note(&self) -> Option<String> {
         match (self.block, self.repeat) {

@@ -26,6 +26,6 @@ pub use ledger::{
     Ringing, SumUnderestimated, Time, Transfer, peak_memory_bytes, write_whole,
 };
 pub use maps::{Group, MapOptions, Panel, Scale, draw_map, draw_maps};
-pub use page::{RunPictures, audit_page, difference_page, ledger_page};
+pub use page::{BandPictures, RunPictures, audit_page, difference_page, ledger_page};
 pub use palette::Palette;
 pub use picture::Picture;

@@ -4,6 +4,7 @@
 //!   read in grey and by every eye.
 //! - [`Palette::Diverging`]: rust below zero, off-white at zero, blue above. Both arms have the same lightness and
 //!   chroma at the same distance from zero, and their hues lie along the axis that colour-blind eyes keep.
+//! - [`class_colour`]: classes have no order; neighbours differ in hue and in lightness.
 //! - Missing pixels are a flat grey with a hatch, which no palette can be taken for.
 
 use super::colour::Oklab;
@@ -40,6 +41,13 @@ impl Palette {
             }
         }
     }
+}
+
+/// The colour of the class in place `i` among its fellows: hues a golden angle apart, in four steps of lightness, so that
+/// neighbours differ for every eye.
+pub fn class_colour(i: usize) -> Oklab {
+    const LIGHTNESS: [f64; 4] = [0.54, 0.82, 0.66, 0.42];
+    Oklab::from_lch(LIGHTNESS[i % 4], 0.1, 235.0 + 137.507_764 * i as f64).into_gamut()
 }
 
 #[cfg(test)]
@@ -105,6 +113,19 @@ mod tests {
         for pair in colours.windows(2) {
             let rise = Oklab::from_rgb(pair[1].to_rgb()).l - Oklab::from_rgb(pair[0].to_rgb()).l;
             assert!((rise - 0.55 / f64::from(steps)).abs() < 0.006, "{rise}");
+        }
+    }
+
+    #[test]
+    fn classes_stay_apart_for_every_eye() {
+        let colours: Vec<Oklab> = (0..8).map(class_colour).collect();
+        for (name, matrix) in DICHROMATS {
+            for (i, a) in colours.iter().enumerate() {
+                for (j, b) in colours.iter().enumerate().take(i) {
+                    let apart = seen_by(&matrix, *a).distance(seen_by(&matrix, *b));
+                    assert!(apart > 0.04, "{name}: {j} and {i} are {apart} apart");
+                }
+            }
         }
     }
 

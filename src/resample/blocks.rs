@@ -110,8 +110,8 @@ impl Engine<'_> {
         (grid.rows, grid.columns)
     }
 
-    /// Runs all blocks in order. Of totals, what falls outside the frame is added up afterwards and returned. `alignment` is
-    /// what the sink asks of windows; `side` fixes the side of blocks, otherwise they follow the memory.
+    /// Runs all blocks in order. `alignment` is what the sink asks of windows; `side` fixes the side of blocks, otherwise they
+    /// follow the memory. What totals leave beyond the frame is told by [`Engine::beyond`].
     ///
     /// # Errors
     /// What the source or `take` meets, or a limit when not even one small block fits the memory.
@@ -120,11 +120,8 @@ impl Engine<'_> {
         alignment: usize,
         side: Option<usize>,
         take: &mut dyn FnMut(Block) -> Result<()>,
-    ) -> Result<Shifted> {
-        let (height, width) = match side {
-            Some(s) => (s, s),
-            None => self.block_size(alignment)?,
-        };
+    ) -> Result<()> {
+        let (height, width) = self.block_sides(alignment, side)?;
         let runner = self.runner();
         for r in (0..self.target.0).step_by(height) {
             for c in (0..self.target.1).step_by(width) {
@@ -133,10 +130,12 @@ impl Engine<'_> {
                 take(runner.window(&rows, &columns)?)?;
             }
         }
-        match &runner.passes {
-            Precision::F64(passes) => self.outside(passes, height, width),
-            Precision::F32(_) => Ok(Shifted::default()),
-        }
+        Ok(())
+    }
+
+    /// Height and width of blocks.
+    pub(super) fn block_sides(&self, alignment: usize, side: Option<usize>) -> Result<Size> {
+        side.map_or_else(|| self.block_size(alignment), |s| Ok((s, s)))
     }
 
     /// The engine with its passes prepared, for windows in any order.
@@ -156,41 +155,6 @@ impl Engine<'_> {
     pub fn block_need(&self, alignment: usize) -> Result<(Size, usize)> {
         let (height, width) = self.block_size(alignment)?;
         Ok(((height, width), self.block_bytes(height, width)))
-    }
-
-    /// Adds up what a raster of totals leaves beyond the frame: the same cells as within, one by one.
-    fn outside(&self, passes: &Passes<f64>, height: usize, width: usize) -> Result<Shifted> {
-        let mut all = Shifted::default();
-        let Some((rows, columns)) = self.plan.touched(self.source_size(), self.rules) else { return Ok(all) };
-        let (h, w) = (self.target.0 as i64, self.target.1 as i64);
-        let (top, bottom) = (rows.start.min(0)..rows.end.min(0), rows.start.max(h)..rows.end.max(h));
-        let middle = rows.start.clamp(0, h)..rows.end.clamp(0, h);
-        let (left, right) =
-            (columns.start.min(0)..columns.end.min(0), columns.start.max(w)..columns.end.max(w));
-        let parts =
-            [(top, columns.clone()), (bottom, columns.clone()), (middle.clone(), left), (middle, right)];
-        for (rows, columns) in parts {
-            for r in rows.clone().step_by(height) {
-                for c in columns.clone().step_by(width) {
-                    let span = Span {
-                        rows: r..(r + height as i64).min(rows.end),
-                        columns: c..(c + width as i64).min(columns.end),
-                    };
-                    let Some(prepared) = passes.prepare(self, &self.grown(&span))? else { continue };
-                    for band in 0..self.source.header().bands {
-                        let mut settled = self.settled(&prepared, &span, band)?;
-                        // What is missing there was dropped there.
-                        settled
-                            .values
-                            .iter()
-                            .filter(|v| !v.is_nan())
-                            .for_each(|v| settled.shifted.left_frame.add(*v));
-                        all.merge(&settled.shifted);
-                    }
-                }
-            }
-        }
-        Ok(all)
     }
 
     /// Resamples one block of the output.
@@ -265,7 +229,7 @@ impl Engine<'_> {
     }
 
     /// A block with the pixels around that have a say in it.
-    fn grown(&self, span: &Span) -> Span {
+    pub(super) fn grown(&self, span: &Span) -> Span {
         let halo =
             if self.limits() { limit::halo(self.rules.values, &self.plan.back(), self.target) } else { 0 };
         let grow = |r: &Range<i64>| r.start - halo..r.end + halo;
@@ -278,7 +242,12 @@ impl Engine<'_> {
     }
 
     /// The settled values of a band over `span`, of a block prepared with what is around it.
-    fn settled<T: Real>(&self, prepared: &Prepared<T>, span: &Span, band: usize) -> Result<Settled<T>> {
+    pub(super) fn settled<T: Real>(
+        &self,
+        prepared: &Prepared<T>,
+        span: &Span,
+        band: usize,
+    ) -> Result<Settled<T>> {
         let around = self.grown(span);
         let inner = (
             (span.rows.start - around.rows.start) as usize..(span.rows.end - around.rows.start) as usize,

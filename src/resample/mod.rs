@@ -1,6 +1,7 @@
 //! Resampling: a plan picked from grids, map and kernel, and the passes that carry it out.
 
 pub mod axis;
+mod beyond;
 pub mod blocks;
 mod chain;
 mod conserve;

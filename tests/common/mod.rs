@@ -84,7 +84,7 @@ pub fn make(
     let engine = Engine { source, target, plan, rules, codes, sample_type, fill: None, extras };
     let empty = vec![f64::NAN; target.0 * target.1];
     let mut made = Made { values: empty.clone(), sigma: empty, shifted: Shifted::default() };
-    let outside = engine
+    engine
         .run(1, side, &mut |block| {
             let values: Vec<f64> =
                 regauge::with_samples!(&block.samples, v => v.iter().map(|v| v.wide()).collect());
@@ -101,7 +101,7 @@ pub fn make(
             Ok(())
         })
         .unwrap();
-    made.shifted.merge(&outside);
+    made.shifted.merge(&engine.beyond(1, side, &mut |_| Ok(())).unwrap());
     made
 }
 

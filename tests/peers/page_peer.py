@@ -8,6 +8,7 @@ import subprocess
 import tempfile
 
 import numpy as np
+import tifffile
 from common import conclude, path, regauge, true
 
 CHROMIUM = next((p for p in map(shutil.which, ("chromium", "chromium-browser", "google-chrome")) if p), None)
@@ -105,6 +106,17 @@ np.save(path("one.npy"), a)
 np.save(path("two.npy"), a + rng.normal(0, 2, a.shape).astype("f4"))
 regauge("unify", path("one.npy"), path("two.npy"), "--onto", path("one.npy"), "--out", path("both"), *common)
 judge("unify", page, 2)
+blocks = np.repeat(np.repeat(rng.choice([3, 17, 200], (12, 14)), 13, 0), 12, 1).astype("u1")
+np.save(path("classes.npy"), blocks)
+regauge("rescale", path("classes.npy"), path("fewer.npy"), "--factor", "0.4", "--values", "label", *common)
+judge("classes", page, 1)
+with open(page, encoding="utf-8") as f:
+    text = f.read()
+true("classes are named, and nothing else is", all(f"</i>{c}</span>" in text for c in (3, 17, 200)) and text.count("</i>") == 3)
+true("classes have no difference", "Output less input" not in text)
+tifffile.imwrite(path("bands.tif"), np.stack([a, 2 * a, a[::-1]]), photometric="minisblack", planarconfig="separate")
+regauge("move", path("bands.tif"), path("bands-out.tif"), "--shift", "0.4,0.2", *common)
+judge("bands", page, 3)
 regauge("audit", odd, path("half.tif"), *common)
 judge("audit", page, 1)
 regauge("subtract", path("one.npy"), path("two.npy"), path("d.tif"), "--sigma", "2", *common)

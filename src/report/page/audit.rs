@@ -1,16 +1,17 @@
 //! The page of an audit: both rasters, where signal went, how far content is displaced, what detail is left.
 
 use super::plot::{Arrow, Lines, Series, arrows, heat, lines};
-use super::{Range, Tile, flick, page, percent, picture, scale, section, table, tiles, words};
+use super::{BandPictures, Paint, Range, Tile, flick, page, percent, picture, section, table, tiles, words};
 use crate::error::Result;
+use crate::report::Audit;
+use crate::report::audit_words::signed;
 use crate::report::palette::Palette;
-use crate::report::{Audit, RunPictures};
 
-/// The page of an audit; of the pictures only before, after and difference are shown.
+/// The page of an audit with the pictures of its band.
 ///
 /// # Errors
 /// When a picture cannot be made.
-pub fn audit_page(audit: &Audit, p: &RunPictures) -> Result<String> {
+pub fn audit_page(audit: &Audit, p: &BandPictures) -> Result<String> {
     let mut all = Vec::new();
     if let Some(c) = audit.flux.closure {
         let note = "of the signal that both cover";
@@ -18,9 +19,7 @@ pub fn audit_page(audit: &Audit, p: &RunPictures) -> Result<String> {
     }
     let moved = match (audit.displacement.rows, audit.displacement.columns) {
         (Some(r), Some(c)) => {
-            // No sign where there is nothing.
-            let tidy = |v: f64| if v.abs() < 5e-4 { "0".into() } else { format!("{v:+.3}") };
-            format!("{}, {} px", tidy(r), tidy(c))
+            format!("{}, {} px", signed(r), signed(c))
         }
         _ => "not measured".into(),
     };
@@ -47,9 +46,8 @@ pub fn audit_page(audit: &Audit, p: &RunPictures) -> Result<String> {
         all.push(Tile { holds: c.held, ..Tile::new(&format!("Check: {}", c.name), text.into(), &note) });
     }
     let mut body = tiles(&all) + &section("In words", &words(&audit.summary()));
-    let range = Range::of(&[&p.before, &p.after]);
-    let shown =
-        |v: &[f64], class, alt| picture(v, p.columns, p.repeat, Palette::Sequential, range, (class, alt));
+    let paint = Paint::Scale(Palette::Sequential, Range::of(&[&p.before, &p.after]));
+    let shown = |v: &[f64], class, alt| picture(v, p.columns, p.repeat, &paint, (class, alt));
     let pair = (
         shown(&p.before, "first", "BEFORE, its nearest samples on AFTER's grid")?,
         shown(&p.after, "second", "AFTER")?,
@@ -58,14 +56,14 @@ pub fn audit_page(audit: &Audit, p: &RunPictures) -> Result<String> {
                    Hatched grey is missing.";
     body += &section(
         "Before and after",
-        &flick(("Before", "After"), (&pair.0, &pair.1), &scale(Palette::Sequential, range, ""), caption),
+        &flick(("Before", "After"), (&pair.0, &pair.1), &paint.key(""), caption),
     );
     let map = &audit.closure_map;
     let most = super::ledger::most_of(&map.closure);
     let cells = heat("Local closure over AFTER", (map.rows, map.columns), &map.closure, most, percent);
     let went = format!(
         "<figure>{cells}{}<figcaption>(after − before) / |before| of each part.</figcaption></figure>",
-        scale(Palette::Diverging, Range { low: -100.0 * most, high: 100.0 * most }, "%")
+        Paint::Scale(Palette::Diverging, Range { low: -100.0 * most, high: 100.0 * most }).key("%")
     );
     let field = field(audit);
     body += &format!("<div class=\"pair\">\n{}{field}</div>\n", section("Where signal went", &went));

@@ -1,7 +1,7 @@
 //! The page of a difference of two rasters.
 
 use super::figure::number;
-use super::{Range, Tile, page, picture, scale, section, table, tiles, words};
+use super::{Paint, Range, Tile, page, picture, section, table, tiles, words};
 use crate::error::Result;
 use crate::report::palette::Palette;
 use serde_json::Value;
@@ -30,13 +30,13 @@ pub fn difference_page(
     if let Some(v) = get("beyond_3_sigma") {
         all.push(Tile::new("Beyond three sigma", format!("{:.2} %", 100.0 * v), "0.27 % would be by chance"));
     }
-    let range = Range::about_zero(values);
+    let paint = Paint::Scale(Palette::Diverging, Range::about_zero(values));
     let alt = ("", "The difference, rust where negative, blue where positive");
     let figure = format!(
         "<figure>{}{}<figcaption>Rust where A is lower than B, blue where it is higher; hatched grey where one is missing.\
          </figcaption></figure>",
-        picture(values, columns, repeat, Palette::Diverging, range, alt)?,
-        scale(Palette::Diverging, range, "")
+        picture(values, columns, repeat, &paint, alt)?,
+        paint.key("")
     );
     let body = tiles(&all)
         + &section("In words", &words(summary))

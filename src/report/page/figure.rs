@@ -3,8 +3,8 @@
 use super::escape;
 use crate::error::Result;
 use crate::report::Picture;
-use crate::report::colour::Oklab;
-use crate::report::palette::{MISSING_GROUND, MISSING_HATCH, Palette};
+use crate::report::colour::{Oklab, Rgb};
+use crate::report::palette::{MISSING_GROUND, MISSING_HATCH, Palette, class_colour};
 use base64::Engine;
 
 /// What the ends of a palette stand for.
@@ -41,6 +41,76 @@ impl Range {
     }
 }
 
+/// How values become colours.
+#[derive(Clone, Debug, PartialEq)]
+pub enum Paint {
+    /// By size.
+    Scale(Palette, Range),
+    /// Class codes: these, in ascending order.
+    Classes(Vec<f64>),
+}
+
+/// Classes that a key names.
+const NAMED_CLASSES: usize = 24;
+
+impl Paint {
+    /// For class codes of some rasters.
+    pub fn classes(all: &[&[f64]]) -> Self {
+        let mut codes: Vec<f64> = Vec::new();
+        for v in all.iter().flat_map(|v| v.iter()).filter(|v| v.is_finite()) {
+            if let Err(at) = codes.binary_search_by(|c| c.total_cmp(v)) {
+                codes.insert(at, *v);
+            }
+        }
+        Paint::Classes(codes)
+    }
+
+    fn colour(&self, v: f64) -> Rgb {
+        match self {
+            Paint::Scale(palette, range) => palette.at(range.place(v)),
+            Paint::Classes(codes) => class_colour(codes.partition_point(|c| *c < v)),
+        }
+        .to_rgb()
+    }
+
+    /// What the colours stand for.
+    pub fn key(&self, unit: &str) -> String {
+        let Paint::Classes(codes) = self else { return self.bar(unit) };
+        let named: String = codes
+            .iter()
+            .take(NAMED_CLASSES)
+            .map(|c| {
+                let [r, g, b] = self.colour(*c);
+                format!("<span><i style=\"background:#{r:02x}{g:02x}{b:02x}\"></i>{}</span>", number(*c))
+            })
+            .collect();
+        let more = codes.len().saturating_sub(NAMED_CLASSES);
+        let rest = if more > 0 { format!("<span>and {more} more</span>") } else { String::new() };
+        format!("<div class=\"classes\">{named}{rest}</div>\n")
+    }
+
+    /// A colour bar with its ends.
+    fn bar(&self, unit: &str) -> String {
+        let Paint::Scale(palette, range) = self else { return String::new() };
+        let parts = 48;
+        let cells: String = (0..parts)
+            .map(|i| {
+                let [r, g, b] = palette.at((i as f64 + 0.5) / f64::from(parts)).to_rgb();
+                format!(
+                    "<rect x=\"{i}\" y=\"0\" width=\"1.05\" height=\"1\" fill=\"#{r:02x}{g:02x}{b:02x}\"/>"
+                )
+            })
+            .collect();
+        format!(
+            "<div class=\"scale\"><span>{} {unit}</span><svg viewBox=\"0 0 {parts} 1\" preserveAspectRatio=\"none\" \
+             aria-hidden=\"true\">{cells}</svg><span>{} {unit}</span></div>\n",
+            number(range.low),
+            number(range.high),
+            unit = escape(unit)
+        )
+    }
+}
+
 /// A raster of `columns` values a row as an `img`, `repeat` picture pixels a value; missing ones are hatched grey.
 ///
 /// # Errors
@@ -49,8 +119,7 @@ pub fn picture(
     values: &[f64],
     columns: usize,
     repeat: usize,
-    palette: Palette,
-    range: Range,
+    paint: &Paint,
     (class, alt): (&str, &str),
 ) -> Result<String> {
     let columns = columns.max(1);
@@ -68,7 +137,7 @@ pub fn picture(
                 }
             }
         } else {
-            picture.fill(c, r, repeat, repeat, palette.at(range.place(*v)).to_rgb());
+            picture.fill(c, r, repeat, repeat, paint.colour(*v));
         }
     }
     let png = base64::engine::general_purpose::STANDARD.encode(picture.to_png()?);
@@ -78,24 +147,6 @@ pub fn picture(
         rows * repeat,
         escape(alt)
     ))
-}
-
-/// A colour bar with its ends.
-pub fn scale(palette: Palette, range: Range, unit: &str) -> String {
-    let parts = 48;
-    let cells: String = (0..parts)
-        .map(|i| {
-            let [r, g, b] = palette.at((i as f64 + 0.5) / f64::from(parts)).to_rgb();
-            format!("<rect x=\"{i}\" y=\"0\" width=\"1.05\" height=\"1\" fill=\"#{r:02x}{g:02x}{b:02x}\"/>")
-        })
-        .collect();
-    format!(
-        "<div class=\"scale\"><span>{} {unit}</span><svg viewBox=\"0 0 {parts} 1\" preserveAspectRatio=\"none\" aria-hidden=\"true\">\
-         {cells}</svg><span>{} {unit}</span></div>\n",
-        number(range.low),
-        number(range.high),
-        unit = escape(unit)
-    )
 }
 
 /// Short text of a number.

@@ -2,13 +2,16 @@
 
 use super::figure::number;
 use super::plot::{Bars, Lines, Series, bars, heat, lines};
-use super::{Range, Tile, flick, page, percent, picture, scale, section, table, tiles, words};
+use super::{Paint, Range, Tile, flick, page, percent, picture, section, table, tiles, words};
 use crate::error::Result;
 use crate::report::Ledger;
 use crate::report::palette::Palette;
 
-/// What a page shows of one run beside its ledger. Pictures are on the output's grid: row by row, NaN = missing.
-pub struct RunPictures {
+/// The pictures of one band, on the output's grid: row by row, NaN = missing.
+#[derive(Clone, Debug)]
+pub struct BandPictures {
+    /// What the band is called; empty where there is but one.
+    pub name: String,
     /// Values in a row of a picture.
     pub columns: usize,
     /// Picture pixels a value.
@@ -21,6 +24,16 @@ pub struct RunPictures {
     pub difference: Vec<f64>,
     /// How the pictures were reduced; may be empty.
     pub note: String,
+}
+
+/// What a page shows of one run beside its ledger.
+pub struct RunPictures {
+    /// The bands that are shown.
+    pub bands: Vec<BandPictures>,
+    /// How many are not.
+    pub hidden: usize,
+    /// Whether the values are class codes.
+    pub classes: bool,
     /// Frequency (cycles per input pixel), mean transfer over sub-pixel phase, and the worst.
     pub transfer: Vec<[f64; 3]>,
     /// The output's Nyquist frequency in cycles per input pixel.
@@ -58,24 +71,17 @@ fn name_of(ledger: &Ledger) -> String {
 fn run(ledger: &Ledger, p: &RunPictures) -> Result<String> {
     let mut out = tiles(&at_a_glance(ledger));
     out += &section("In words", &words(&ledger.summary()));
-    let range = Range::of(&[&p.before, &p.after]);
-    let sequential = |v: &[f64], class, alt: &str| {
-        picture(v, p.columns, p.repeat, Palette::Sequential, range, (class, alt))
-    };
-    let pictures = (
-        sequential(&p.before, "first", "The input, its nearest samples on the output's grid")?,
-        sequential(&p.after, "second", "The output")?,
-    );
-    let note = if p.note.is_empty() { String::new() } else { format!(" {}.", p.note) };
-    let bar = scale(Palette::Sequential, range, "");
-    let caption = format!(
-        "Before: the input's own samples, each output place showing the nearest. After: the output. Colours run from the 1st to the \
-         99.5th percentile of both; hatched grey is missing.{note}"
-    );
-    out +=
-        &section("Before and after", &flick(("Before", "After"), (&pictures.0, &pictures.1), &bar, &caption));
-    let difference = if p.difference.is_empty() { String::new() } else { difference(p)? };
-    out += &format!("<div class=\"pair\">\n{difference}{}</div>\n", closure(ledger));
+    for band in &p.bands {
+        out += &before_and_after(band, p.classes)?;
+    }
+    if p.hidden > 0 {
+        out += &format!("<p>{} more bands are not shown; the numbers hold for all.</p>\n", p.hidden);
+    }
+    let mut pair = String::new();
+    for band in p.bands.iter().filter(|b| !b.difference.is_empty()) {
+        pair += &difference(band)?;
+    }
+    out += &format!("<div class=\"pair\">\n{pair}{}</div>\n", closure(ledger));
     out += &section("What the kernel does", &kernel(ledger, p));
     let table = table(&serde_json::to_value(ledger).unwrap_or_default(), meaning);
     out += &section(
@@ -85,24 +91,46 @@ fn run(ledger: &Ledger, p: &RunPictures) -> Result<String> {
     Ok(out)
 }
 
+fn before_and_after(p: &BandPictures, classes: bool) -> Result<String> {
+    let both: [&[f64]; 2] = [&p.before, &p.after];
+    let paint =
+        if classes { Paint::classes(&both) } else { Paint::Scale(Palette::Sequential, Range::of(&both)) };
+    let shown = |v: &[f64], class, alt: &str| picture(v, p.columns, p.repeat, &paint, (class, alt));
+    let pictures = (
+        shown(&p.before, "first", "The input, its nearest samples on the output's grid")?,
+        shown(&p.after, "second", "The output")?,
+    );
+    let note = if p.note.is_empty() { String::new() } else { format!(" {}.", p.note) };
+    let colours = if classes {
+        "Each class has its colour"
+    } else {
+        "Colours run from the 1st to the 99.5th percentile of both"
+    };
+    let caption = format!(
+        "Before: the input's own samples, each output place showing the nearest. After: the output. {colours}; hatched grey is \
+         missing.{note}"
+    );
+    let figure = flick(("Before", "After"), (&pictures.0, &pictures.1), &paint.key(""), &caption);
+    Ok(section(&of_band("Before and after", &p.name), &figure))
+}
+
+/// A heading that names the band, if it has a name.
+fn of_band(heading: &str, name: &str) -> String {
+    if name.is_empty() { heading.into() } else { format!("{heading}: {name}") }
+}
+
 /// The section that shows output less input.
-fn difference(p: &RunPictures) -> Result<String> {
-    let about = Range::about_zero(&p.difference);
-    let difference = picture(
-        &p.difference,
-        p.columns,
-        p.repeat,
-        Palette::Diverging,
-        about,
-        ("", "Output less input on the output's grid"),
-    )?;
+fn difference(p: &BandPictures) -> Result<String> {
+    let paint = Paint::Scale(Palette::Diverging, Range::about_zero(&p.difference));
+    let alt = ("", "Output less input on the output's grid");
+    let difference = picture(&p.difference, p.columns, p.repeat, &paint, alt)?;
     let shown = format!(
         "<figure>{difference}{}<figcaption>Output less input, the input looked at by linear interpolation: rust where the output is \
          lower, blue where it is higher. What stands here is the kernel's doing and that of the linear look together; on a reduced \
          picture also what its own sampling misses.</figcaption></figure>",
-        scale(Palette::Diverging, about, "")
+        paint.key("")
     );
-    Ok(section("Difference", &shown))
+    Ok(section(&of_band("Difference", &p.name), &shown))
 }
 
 fn at_a_glance(l: &Ledger) -> Vec<Tile> {
@@ -156,13 +184,13 @@ fn closure(l: &Ledger) -> String {
         most,
         percent,
     );
-    let range = Range { low: -100.0 * most, high: 100.0 * most };
+    let paint = Paint::Scale(Palette::Diverging, Range { low: -100.0 * most, high: 100.0 * most });
     section(
         "Where signal went",
         &format!(
             "<figure>{map}{}<figcaption>(after − before) / |before| of each part of {} × {} output pixels. Small values of both signs \
              side by side are signal that crossed a border between parts.</figcaption></figure>",
-            scale(Palette::Diverging, range, "%"),
+            paint.key("%"),
             local.cell[0],
             local.cell[1]
         ),

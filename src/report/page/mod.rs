@@ -9,8 +9,8 @@ mod plot;
 
 pub use audit::audit_page;
 pub use difference::difference_page;
-use figure::{Range, flick, picture, scale};
-pub use ledger::{RunPictures, ledger_page};
+use figure::{Paint, Range, flick, picture};
+pub use ledger::{BandPictures, RunPictures, ledger_page};
 
 use serde_json::Value;
 
