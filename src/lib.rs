@@ -57,6 +57,8 @@ pub mod kernel;
 pub mod map;
 pub mod measure;
 pub mod pattern;
+#[cfg(feature = "python")]
+mod python;
 pub mod raster;
 mod real;
 pub mod report;

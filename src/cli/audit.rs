@@ -1,11 +1,10 @@
 //! `regauge audit`: a resampling, whoever did it, measured against its original.
 
-use super::common::{about, command_line, memory, say, say_notes};
+use super::common::{command_line, memory, say, say_notes};
 use super::progress::Bar;
-use super::unify::way_back;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
-use crate::job::{AuditRules, AuditValues, audit_files, relate, write_audit_report};
+use crate::job::{AuditRules, AuditValues, about, audit_files, relate, way_back, write_audit_report};
 use crate::map::MapFile;
 use crate::raster;
 use crate::report::Relation;

@@ -344,13 +344,3 @@ pub fn conclude(ledgers: &[Ledger], running: &Running) -> Result<Outcome> {
     let failed = ledgers.iter().any(Ledger::failed_a_check);
     Ok(if failed { Outcome::CheckFailed } else { Outcome::Done })
 }
-
-/// Turns an error about a grid or map into one that names the file.
-pub fn about(path: &std::path::Path, e: Error) -> Error {
-    match e {
-        Error::Unfit { problem, mend } => {
-            Error::Unfit { problem: format!("{}: {problem}", path.display()), mend }
-        }
-        other => other,
-    }
-}

@@ -2,11 +2,10 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, about, row_and_column, rules, run_one, say_notes,
-    warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, row_and_column, rules, run_one, say_notes, warn_of_kernel,
 };
 use crate::error::{Error, Result};
-use crate::job::Job;
+use crate::job::{Job, about};
 use crate::map::{Frame, Map, MapFile, Motion, moved};
 use crate::raster;
 use crate::resample::Plan;

@@ -1,11 +1,9 @@
 //! `regauge rescale`: a new pixel size.
 
 use super::Outcome;
-use super::common::{
-    Planes, Resampling, Running, about, pair, rules, run_one, say_notes, size, warn_of_kernel,
-};
+use super::common::{Planes, Resampling, Running, pair, rules, run_one, say_notes, size, warn_of_kernel};
 use crate::error::Result;
-use crate::job::Job;
+use crate::job::{Job, about};
 use crate::map::{Anchor, Rescale, rescaled};
 use crate::raster;
 use crate::resample::Outside;

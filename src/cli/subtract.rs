@@ -5,11 +5,10 @@ use super::common::{
     warn_of_kernel,
 };
 use super::progress::Bar;
-use super::unify::way_back;
 use super::{Outcome, print_json};
 use crate::error::{Error, Result};
 use crate::grid::Grid;
-use crate::job::{Conduct, Job, Subtract, reduced};
+use crate::job::{Conduct, Job, Subtract, reduced, way_back};
 use crate::map::MapFile;
 use crate::raster;
 use crate::report::{difference_page, write_whole};

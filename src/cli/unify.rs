@@ -2,13 +2,13 @@
 
 use super::Outcome;
 use super::common::{
-    OutsideOption, Planes, Resampling, Running, about, check_report, command_line, conclude, pair, report,
-    rules, run_job, say, say_notes, tell_estimate, warn_of_kernel,
+    OutsideOption, Planes, Resampling, Running, check_report, command_line, conclude, pair, report, rules,
+    run_job, say, say_notes, tell_estimate, warn_of_kernel,
 };
 use crate::error::{Error, Result};
 use crate::grid::{Grid, Span, span};
-use crate::job::{Conduct, Job};
-use crate::map::{Map, MapFile};
+use crate::job::{Conduct, Job, way_back};
+use crate::map::MapFile;
 use crate::raster;
 use clap::Args;
 use std::collections::HashMap;
@@ -180,75 +180,6 @@ fn place_by_map(path: &Path, grid: &Grid, file: &MapFile, first: &Grid) -> Resul
     let world = [[right.0 - o.0, down.0 - o.0, o.0], [right.1 - o.1, down.1 - o.1, o.1]];
     // Without a world of its own the reference's pixels are the world.
     Ok(Grid { world: Some(world), crs: reference.crs.clone(), unit: reference.unit.clone(), ..grid.clone() })
-}
-
-/// From target positions to positions in the raster.
-pub(super) fn way_back(
-    path: &Path,
-    grid: &Grid,
-    file: Option<&MapFile>,
-    target: &Grid,
-    name: &str,
-) -> Result<Map> {
-    let Some(file) = file else {
-        target.check_same_crs(grid, (name, &path.display().to_string()))?;
-        if target.world.is_some() && grid.world.is_none() {
-            return Err(Error::unfit(
-                format!("{} has no place in the world, {name} has", path.display()),
-                "give it a --map, or a georeference",
-            ));
-        }
-        return target.to(grid).map_err(|e| about(path, e));
-    };
-    let map = file.map();
-    let onto_reference = match &file.reference {
-        // A reference without a place is known by its size; its pixels are then the target's own.
-        Some(r) if r.world.is_none() && target.world.is_some() => {
-            if (r.rows, r.columns) != (target.rows, target.columns) {
-                return Err(Error::unfit(
-                    format!(
-                        "the map for {} refers to a grid of {} x {} pixels without a place in the world, {name} has {} x {}",
-                        path.display(),
-                        r.rows,
-                        r.columns,
-                        target.rows,
-                        target.columns
-                    ),
-                    "use --onto with the map's reference",
-                ));
-            }
-            Map::IDENTITY
-        }
-        Some(r) => {
-            target.check_same_crs(r, (name, "the map's reference"))?;
-            target.to(r).map_err(|e| about(path, e))?
-        }
-        None => Map::IDENTITY,
-    };
-    let moving = match &file.moving {
-        Some(m) if m != grid => {
-            if m.world.is_none() || grid.world.is_none() {
-                if (m.rows, m.columns) != (grid.rows, grid.columns) {
-                    return Err(Error::unfit(
-                        format!(
-                            "the map was made for a raster of {} x {} pixels, {} has {} x {}",
-                            m.rows,
-                            m.columns,
-                            path.display(),
-                            grid.rows,
-                            grid.columns
-                        ),
-                        "give the map that belongs to this raster",
-                    ));
-                }
-                Map::IDENTITY
-            } else {
-                m.to(grid).map_err(|e| about(path, e))?
-            }
-        }
-        _ => Map::IDENTITY,
-    };
-    Ok(onto_reference.then(&map.invert()?).then(&moving))
 }
 
 /// The output's name in the folder of a plane.

@@ -4,7 +4,7 @@ use super::planes::Planes;
 use super::{Conduct, Job, Ready, reading_windows};
 use crate::error::Result;
 use crate::raster::{CELL, SampleType, Source};
-use crate::resample::{Engine, Extras};
+use crate::resample::Extras;
 use serde::Serialize;
 use std::path::PathBuf;
 use std::time::Instant;
@@ -61,20 +61,11 @@ impl Ready<'_> {
         let source: &dyn Source = self.source.as_ref();
         let from = source.header();
         let target = (self.header.grid.rows, self.header.grid.columns);
-        let engine = Engine {
-            source,
-            target,
-            plan: self.plan.clone(),
-            rules: &self.job.rules,
-            codes: self.codes.clone(),
-            sample_type: self.header.sample_type,
-            fill: self.fill,
-            extras: Extras {
-                coverage: conduct.coverage.is_some(),
-                noise: conduct.sigma_out.as_ref().and(self.noise.clone()),
-                ..Extras::default()
-            },
-        };
+        let engine = self.engine(Extras {
+            coverage: conduct.coverage.is_some(),
+            noise: conduct.sigma_out.as_ref().and(self.noise.clone()),
+            ..Extras::default()
+        });
         let ((height, width), memory) = engine.block_need(CELL)?;
         // One window of the input as it would be read through, and one part of the output from its middle.
         let started = Instant::now();

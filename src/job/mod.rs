@@ -7,6 +7,8 @@ mod costs;
 mod describe;
 mod estimate;
 mod fractions;
+mod held;
+mod onto;
 mod planes;
 mod report;
 mod subtract;
@@ -15,6 +17,8 @@ mod windows;
 pub use audit::{AuditRules, AuditValues, MAX_DISPLACEMENT, audit, audit_files, relate};
 pub use describe::{BandStatistics, describe};
 pub use estimate::Estimate;
+pub use held::{Made, Wants};
+pub use onto::{about, way_back};
 pub use planes::SigmaFrom;
 pub use report::{reduced, write_audit_report, write_report};
 pub use subtract::{Difference, DifferenceLedger, Subtract};
@@ -91,7 +95,7 @@ impl Progress for () {
 /// A job with its input opened and its plan made; nothing written yet.
 struct Ready<'a> {
     job: &'a Job,
-    source: Box<dyn Source>,
+    source: Box<dyn Source + 'a>,
     plan: Plan,
     header: Header,
     codes: MissingCodes,
@@ -159,9 +163,15 @@ impl Job {
 
     /// Opens the input and makes the plan.
     fn ready(&self) -> Result<Ready<'_>> {
+        let source = open_masked(&self.input, self.mask.as_deref(), self.rules.missing)?;
+        let noise = self.sigma.as_ref().map(|s| s.open(source.header())).transpose()?;
+        self.ready_on(source, noise)
+    }
+
+    /// Makes the plan for a source that is open.
+    fn ready_on<'a>(&'a self, source: Box<dyn Source + 'a>, noise: Option<Noise>) -> Result<Ready<'a>> {
         self.rules.check()?;
         self.target.check()?;
-        let source = open_masked(&self.input, self.mask.as_deref(), self.rules.missing)?;
         let from = source.header();
         check_tables(from, &self.target, self.rules.memory)?;
         let size = (from.grid.rows, from.grid.columns);
@@ -181,13 +191,12 @@ impl Job {
             ));
         }
         let header = output_header(from, &self.target, sample_type, fill);
-        if self.sigma.is_some() && matches!(self.rules.values, Values::Label | Values::Cyclic(_)) {
+        if noise.is_some() && matches!(self.rules.values, Values::Label | Values::Cyclic(_)) {
             return Err(Error::usage(
                 format!("--sigma has no meaning for --values {}", self.rules.values),
                 "leave --sigma out",
             ));
         }
-        let noise = self.sigma.as_ref().map(|s| s.open(from)).transpose()?;
         Ok(Ready { job: self, plan, header, codes: MissingCodes { codes }, fill, source, noise })
     }
 }
@@ -261,6 +270,20 @@ fn is_same_file(a: &Path, b: &Path) -> bool {
 }
 
 impl Ready<'_> {
+    /// The engine of the plan.
+    fn engine(&self, extras: Extras) -> Engine<'_> {
+        Engine {
+            source: self.source.as_ref(),
+            target: (self.header.grid.rows, self.header.grid.columns),
+            plan: self.plan.clone(),
+            rules: &self.job.rules,
+            codes: self.codes.clone(),
+            sample_type: self.header.sample_type,
+            fill: self.fill,
+            extras,
+        }
+    }
+
     fn check_output(&self, conduct: &Conduct) -> Result<()> {
         let job = self.job;
         if is_same_file(&job.input, &job.output) {
@@ -342,22 +365,16 @@ impl Ready<'_> {
         let (size, target) =
             ((from.grid.rows, from.grid.columns), (self.header.grid.rows, self.header.grid.columns));
         let mut before = inspect(source, &job.back, target, &self.codes, &job.rules, progress)?;
-        self.check_missing(before.account.missing())?;
+        if !sink.as_ref().is_some_and(|s| s.1.wants_missing()) {
+            self.check_missing(before.account.missing())?;
+        }
         let gaps = before.account.missing() > 0;
-        let engine = Engine {
-            source,
-            target,
-            plan: self.plan.clone(),
-            rules: &job.rules,
-            codes: self.codes.clone(),
-            sample_type: self.header.sample_type,
-            fill: self.fill,
-            extras: Extras {
-                signed_angles: before.account.has_negative(),
-                coverage: sink.as_ref().is_some_and(|s| s.1.wants_coverage()),
-                noise: sink.as_ref().filter(|s| s.1.wants_sigma()).and_then(|_| self.noise.clone()),
-            },
-        };
+        let engine = self.engine(Extras {
+            signed_angles: before.account.has_negative(),
+            coverage: sink.as_ref().is_some_and(|s| s.1.wants_coverage()),
+            missing: sink.as_ref().is_some_and(|s| s.1.wants_missing()),
+            noise: sink.as_ref().filter(|s| s.1.wants_sigma()).and_then(|_| self.noise.clone()),
+        });
         let alignment = sink.as_ref().map_or(1, |s| s.0.alignment().max(s.1.alignment())).max(CELL);
         let mut digest = Digest::new(&self.header);
         let total_values = job.rules.values == Values::Total;

@@ -2,7 +2,7 @@
 
 use super::Conduct;
 use crate::error::{Error, Result};
-use crate::raster::{self, Header, MissingCodes, SampleType, Samples, Sink, Window};
+use crate::raster::{self, Collected, Header, MemorySink, MissingCodes, SampleType, Samples, Sink, Window};
 use crate::resample::{Block, Noise};
 use serde::{Deserialize, Deserializer, Serialize, Serializer};
 use std::path::{Path, PathBuf};
@@ -107,9 +107,12 @@ impl SigmaFrom {
 }
 
 /// The planes beside an output.
+#[derive(Default)]
 pub(super) struct Planes {
     sigma: Option<(Box<dyn Sink>, SampleType)>,
     coverage: Option<Box<dyn Sink>>,
+    /// Of u8, 1 where an output is missing.
+    missing: Option<Box<dyn Sink>>,
 }
 
 impl Planes {
@@ -119,7 +122,8 @@ impl Planes {
         let own = plane_header(header, sigma_type(header));
         let sigma = conduct.sigma_out.as_ref().map(|p| start(p, &own)).transpose()?;
         let coverage = conduct.coverage.as_ref().map(|p| start(p, &plane_header(header, SampleType::F32)));
-        Ok(Planes { sigma: sigma.map(|s| (s, own.sample_type)), coverage: coverage.transpose()? })
+        let sigma = sigma.map(|s| (s, own.sample_type));
+        Ok(Planes { sigma, coverage: coverage.transpose()?, missing: None })
     }
 
     /// Refuses, before any work, a file that cannot hold such a plane.
@@ -129,7 +133,20 @@ impl Planes {
 
     /// A plane of sigma only, which takes f64.
     pub fn of_sigma(sink: Option<Box<dyn Sink>>) -> Self {
-        Planes { sigma: sink.map(|s| (s, SampleType::F64)), coverage: None }
+        Planes { sigma: sink.map(|s| (s, SampleType::F64)), ..Planes::default() }
+    }
+
+    /// Planes in memory, as wanted, and where they are found afterwards: sigma, coverage, missing.
+    pub fn in_memory(header: &Header, wants: (bool, bool, bool)) -> (Self, [Option<Collected>; 3]) {
+        let start = |wanted: bool, sample_type| {
+            let made = wanted.then(|| MemorySink::new(plane_header(header, sample_type)));
+            made.map_or((None, None), |(sink, found)| (Some(Box::new(sink) as Box<dyn Sink>), Some(found)))
+        };
+        let own = sigma_type(header);
+        let (sigma, a) = start(wants.0, own);
+        let (coverage, b) = start(wants.1, SampleType::F32);
+        let (missing, c) = start(wants.2, SampleType::U8);
+        (Planes { sigma: sigma.map(|s| (s, own)), coverage, missing }, [a, b, c])
     }
 
     /// Starts one file of f32.
@@ -156,12 +173,19 @@ impl Planes {
         self.coverage.is_some()
     }
 
+    pub fn wants_missing(&self) -> bool {
+        self.missing.is_some()
+    }
+
     pub fn write(&mut self, block: &Block) -> Result<()> {
         if let Some(sigma) = &block.sigma {
             self.write_sigma(&block.window, sigma)?;
         }
         if let (Some(sink), Some(coverage)) = (&mut self.coverage, &block.coverage) {
             sink.write(&block.window, &Samples::F32(coverage.clone()))?;
+        }
+        if let (Some(sink), Some(missing)) = (&mut self.missing, &block.missing) {
+            sink.write(&block.window, &Samples::U8(missing.iter().map(|m| u8::from(*m)).collect()))?;
         }
         Ok(())
     }
@@ -179,7 +203,8 @@ impl Planes {
         if let Some((sink, _)) = self.sigma {
             sink.finish()?;
         }
-        self.coverage.map_or(Ok(()), |sink| sink.finish())
+        self.coverage.map_or(Ok(()), |sink| sink.finish())?;
+        self.missing.map_or(Ok(()), |sink| sink.finish())
     }
 }
 

@@ -52,6 +52,11 @@ impl Raster {
         &self.samples
     }
 
+    /// All samples, to be kept.
+    pub fn into_samples(self) -> Samples {
+        self.samples
+    }
+
     /// The header, to be changed.
     pub fn header_mut(&mut self) -> &mut Header {
         &mut self.header

@@ -6,8 +6,9 @@ use super::axis::{Axis, Way};
 use super::convert::{Counts, convert};
 use super::copy::copy;
 use super::limit::{self, Bounds};
-use super::passes::{Passes, Prepared, Span, nothing};
+use super::passes::{Passes, Prepared, Ranges, Span};
 use super::plan::{Plan, Size};
+use super::prepared::nothing;
 use super::rows_and_columns::Plane;
 use super::rules::{Outside, Rules};
 use super::settle::{Resampled, Settled, Shifted, settle};
@@ -49,6 +50,8 @@ pub struct Extras {
     pub coverage: bool,
     /// The noise of the samples, where the standard uncertainty of the outputs is wanted.
     pub noise: Option<Noise>,
+    /// Which outputs are missing: for types that cannot say so and have no code.
+    pub missing: bool,
     /// Angles are told from minus half a period to half a period, as in a source that has negative ones; else from 0 to the
     /// period.
     pub signed_angles: bool,
@@ -68,6 +71,8 @@ pub struct Block {
     pub shifted: Shifted,
     /// The share of each pixel's weights that found samples, band by band, if wanted.
     pub coverage: Option<Vec<f32>>,
+    /// Whether each pixel is missing, band by band, if wanted.
+    pub missing: Option<Vec<bool>>,
     /// The standard uncertainty of each pixel, band by band, NaN where it is missing or unknown, if wanted.
     pub sigma: Option<Vec<f64>>,
 }
@@ -93,7 +98,7 @@ impl Runner<'_> {
         let engine = self.engine;
         match (&engine.plan, &self.passes) {
             (Plan::Copy { swapped, rows: a, columns: b }, _)
-                if engine.copies_bits() && engine.extras.noise.is_none() =>
+                if engine.copies_bits() && engine.extras.noise.is_none() && !engine.extras.missing =>
             {
                 engine.copied(*swapped, (*a, *b), rows, columns)
             }
@@ -148,6 +153,16 @@ impl Engine<'_> {
         Runner { engine: self, passes }
     }
 
+    /// The rows and the columns of the source that a window of the output needs, every combination of them; `None` if it sees
+    /// nothing.
+    pub fn needs(&self, rows: &Range<usize>, columns: &Range<usize>) -> Option<(Ranges, Ranges)> {
+        let span = self.grown(&Span::of(rows, columns));
+        match self.runner().passes {
+            Precision::F64(passes) => passes.needs(self, &span),
+            Precision::F32(passes) => passes.needs(self, &span),
+        }
+    }
+
     /// What the passes are expected to need at most, in bytes, at the size of blocks that the memory allows.
     ///
     /// # Errors
@@ -164,8 +179,7 @@ impl Engine<'_> {
         rows: &Range<usize>,
         columns: &Range<usize>,
     ) -> Result<Block> {
-        let signed = |r: &Range<usize>| r.start as i64..r.end as i64;
-        let span = Span { rows: signed(rows), columns: signed(columns) };
+        let span = Span::of(rows, columns);
         let prepared = passes.prepare(self, &self.grown(&span))?;
         let mut block = Block {
             window: Window { rows: rows.clone(), columns: columns.clone() },
@@ -174,6 +188,7 @@ impl Engine<'_> {
             near_gap: 0,
             shifted: Shifted::default(),
             coverage: self.extras.coverage.then(Vec::new),
+            missing: self.extras.missing.then(Vec::new),
             sigma: self.extras.noise.is_some().then(Vec::new),
         };
         for band in 0..self.source.header().bands {
@@ -194,6 +209,9 @@ impl Engine<'_> {
                     }
                     None => vec![f64::NAN; settled.values.len()],
                 });
+            }
+            if let Some(missing) = &mut block.missing {
+                missing.extend(settled.values.iter().map(|v| v.to_f64().is_nan()));
             }
             let (converted, counts) = convert(settled.values.view(), self.sample_type, self.fill);
             block.counts.add(&counts);
@@ -328,6 +346,7 @@ impl Engine<'_> {
             near_gap: 0,
             shifted: Shifted::default(),
             coverage,
+            missing: None,
             sigma: None,
         })
     }

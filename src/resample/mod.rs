@@ -17,6 +17,7 @@ mod overlap;
 mod passes;
 mod patch;
 mod plan;
+mod prepared;
 mod rows_and_columns;
 mod rules;
 mod settle;
@@ -30,6 +31,7 @@ pub use blocks::{Block, Engine, Extras, Runner};
 pub use convert::{Counts, convert};
 pub use effective::Effective;
 pub use overlap::{Cells, corners};
+pub use passes::Ranges;
 pub use plan::{Plan, Size};
 
 /// The symbol of the prefilter that solves the least-squares equations of a B-spline kernel.

@@ -109,6 +109,18 @@ impl Patch {
         Ok(Patch { samples, rows, columns, missing })
     }
 
+    /// The rows and columns (of a raster of `size`, or of its transpose) that [`Patch::read`] reads.
+    pub fn ranges(
+        size: (usize, usize),
+        rows: &Range<i64>,
+        columns: &Range<i64>,
+        swapped: bool,
+        extension: Extension,
+    ) -> (Vec<Range<usize>>, Vec<Range<usize>>) {
+        let (n, m) = if swapped { (size.1, size.0) } else { size };
+        (AxisRead::new(rows, n, extension).ranges, AxisRead::new(columns, m, extension).ranges)
+    }
+
     /// Number of extended rows and columns.
     pub fn size(&self) -> (usize, usize) {
         (self.rows.places.len(), self.columns.places.len())
